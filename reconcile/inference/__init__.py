@@ -1,0 +1,1 @@
+"""From readings to what they say: model, likelihood, fit, verdicts, outcome."""

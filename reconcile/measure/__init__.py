@@ -1,0 +1,1 @@
+"""Arrays become a value with its standard uncertainty; opens no file."""

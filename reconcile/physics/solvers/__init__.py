@@ -1,0 +1,1 @@
+"""The fuller calculations that judge the reduced formulas."""

@@ -1,0 +1,1 @@
+"""Everything a reader sees; computes nothing but layout."""
