@@ -13,8 +13,8 @@ from reconcile.physics.matter import Fluid, Values
 
 # √(3/2) B(5/6, 1/2)/3: collapse of an empty cavity (Lord Rayleigh, Phil. Mag. 34, 94, 1917).
 RAYLEIGH = 0.9146813565019629
-# Image sources: 1/2 ln 2 × B(7/6, 1/2)/B(5/6, 1/2) for all images of a free surface, 1/4 of that quotient for the one of
-# a wall, and the second-order term of both, over the square of the first-order one.
+# Image sources: 1/2 ln 2 × B(7/6, 1/2)/B(5/6, 1/2) for all images of a free surface, 1/4 of that quotient for the one
+# of a wall, and the second-order term of both, over the square of the first-order one.
 SURFACE_IMAGES = 0.28175804426329465
 WALL_IMAGE = 0.2032454665946196
 SECOND_ORDER = 0.5303745930509779  # B(3/2, 1/2) B(5/6, 1/2)/(2 B(7/6, 1/2)²)

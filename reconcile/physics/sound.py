@@ -55,7 +55,7 @@ class Pulse:
 
 
 def _spot(source: Source, metal: Metal, fluid: Fluid) -> tuple[Values, Values]:
-    """Return the contact's velocity on the axis [m/s], and the spot's mean of depth × velocity² over its value there."""
+    """Return the contact's velocity on the axis [m/s], and the spot's mean of depth × velocity² over that there [1]."""
     pressure = source.pressure_coefficient * energy_density(source.fluence, source.depth)
     on_axis = contact_velocity(pressure, metal, fluid)
     axes = np.broadcast(pressure, source.excess, source.depth_exponent).ndim
