@@ -4,12 +4,12 @@ from __future__ import annotations
 
 import numpy as np
 
-from reconcile.physics.matter import Values
+from reconcile.physics.matter import Array, Values
 
 REFERENCE_INCIDENT = 1e4  # [J/m²] incident fluence at which the absorbed fraction is stated (1 J/cm²)
 
 
-def peak_fluence(energy: Values, radius: Values) -> Values:
+def peak_fluence(energy: Values, radius: Values) -> Array:
     """Return the fluence on the axis of a Gaussian beam [J/m²].
 
     Parameters
@@ -22,10 +22,10 @@ def peak_fluence(energy: Values, radius: Values) -> Values:
     2 E/(π w²), the integral of the Gaussian profile; ISO 11146-1 defines the radius.
 
     """
-    return 2.0 * energy / (np.pi * radius**2)
+    return np.asarray(2.0 * energy / (np.pi * radius**2))
 
 
-def absorbed_fluence(incident: Values, absorbed_fraction: Values, absorption_exponent: Values) -> Values:
+def absorbed_fluence(incident: Values, absorbed_fraction: Values, absorption_exponent: Values) -> Array:
     """Return the absorbed fluence on the axis [J/m²].
 
     Parameters
@@ -43,7 +43,7 @@ def absorbed_fluence(incident: Values, absorbed_fraction: Values, absorption_exp
     return absorbed_fraction * REFERENCE_INCIDENT * (incident / REFERENCE_INCIDENT) ** (1.0 + absorption_exponent)
 
 
-def fresnel_absorptance(n: Values, k: Values, liquid_index: Values) -> Values:
+def fresnel_absorptance(n: Values, k: Values, liquid_index: Values) -> Array:
     """Return the share of light that a cold, smooth, thick metal absorbs at normal incidence [1].
 
     Parameters
@@ -57,4 +57,4 @@ def fresnel_absorptance(n: Values, k: Values, liquid_index: Values) -> Values:
     section 14.2 (from memory).
 
     """
-    return 4.0 * liquid_index * n / ((liquid_index + n) ** 2 + k**2)
+    return np.asarray(4.0 * liquid_index * n / ((liquid_index + n) ** 2 + k**2))

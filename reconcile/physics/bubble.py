@@ -9,7 +9,7 @@ from __future__ import annotations
 import numpy as np
 
 from reconcile.physics.heating import REFERENCE_FLUENCE
-from reconcile.physics.matter import Fluid, Values
+from reconcile.physics.matter import Array, Fluid, Values
 
 # √(3/2) B(5/6, 1/2)/3: collapse of an empty cavity (Lord Rayleigh, Phil. Mag. 34, 94, 1917).
 RAYLEIGH = 0.9146813565019629
@@ -23,7 +23,7 @@ SHORTEST_HALF = 1e-30  # [s] floor on growth and collapse of a bubble that is no
 
 def bubble_energy(
     fluence: Values, excess: Values, radius: Values, bubble_yield: Values, yield_exponent: Values
-) -> Values:
+) -> Array:
     """Return the energy of the hemispherical bubble [J].
 
     Parameters
@@ -41,11 +41,11 @@ def bubble_energy(
     """
     absorbed_energy = 0.5 * np.pi * radius**2 * fluence
     strength = bubble_yield * (fluence / REFERENCE_FLUENCE) ** yield_exponent
-    energy: Values = -strength * absorbed_energy * np.expm1(-excess)
+    energy: Array = -strength * absorbed_energy * np.expm1(-excess)
     return energy
 
 
-def largest_radius(energy: Values, overpressure: Values, surface_tension: Values) -> Values:
+def largest_radius(energy: Values, overpressure: Values, surface_tension: Values) -> Array:
     """Return the largest radius of a hemisphere of that energy [m].
 
     Parameters
@@ -60,11 +60,11 @@ def largest_radius(energy: Values, overpressure: Values, surface_tension: Values
 
     """
     free = np.cbrt(1.5 / np.pi * energy / overpressure)
-    radius: Values = free**2 * overpressure / (free * overpressure + surface_tension)
+    radius: Array = free**2 * overpressure / (free * overpressure + surface_tension)
     return radius
 
 
-def boundary_factor(largest_radius: Values, height: float | None = None, wall_distance: float | None = None) -> Values:
+def boundary_factor(largest_radius: Values, height: float | None = None, wall_distance: float | None = None) -> Array:
     """Return the factor on growth and collapse times that the liquid's free surface and a side wall bring [1].
 
     Parameters
@@ -81,7 +81,7 @@ def boundary_factor(largest_radius: Values, height: float | None = None, wall_di
     R = distance of the integrals over the images.
 
     """
-    factor: Values = 1.0
+    factor: Array = np.ones(())
     if height is not None:
         shift = SURFACE_IMAGES / height * largest_radius
         factor = factor / (1.0 + shift * (1.0 + (1.0 + SECOND_ORDER) * shift))
@@ -93,7 +93,7 @@ def boundary_factor(largest_radius: Values, height: float | None = None, wall_di
 
 def collapse_time(
     largest_radius: Values, overpressure: Values, fluid: Fluid, gas: Values, prolongation: Values
-) -> Values:
+) -> Array:
     """Return the time from the largest radius to the collapse [s], zero for a bubble that is none.
 
     Parameters
@@ -115,28 +115,28 @@ def collapse_time(
     viscous_length = 1.0793 * fluid.viscosity / (fluid.density * speed)
     capillary_length = 1.1221 * 2.0 * fluid.surface_tension / overpressure
     held = np.sqrt(largest_radius / (largest_radius + capillary_length))
-    time: Values = prolongation * RAYLEIGH / speed * (largest_radius * corrections + viscous_length) * held
+    time: Array = prolongation * RAYLEIGH / speed * (largest_radius * corrections + viscous_length) * held
     return time
 
 
 def growth_time(
     collapse_time: Values, largest_radius: Values, overpressure: Values, surface_tension: Values, gas: Values
-) -> Values:
+) -> Array:
     """Return the time from the laser pulse to the largest radius [s]; parameters as in `collapse_time`.
 
     Fitted to Keller-Miksis growth, about ±0.001 of it.
     """
     capillary_length = 0.1414 * 2.0 * surface_tension / overpressure
-    return collapse_time * (0.9905 - 0.15 * gas) * largest_radius / (largest_radius + capillary_length)
+    return np.asarray(collapse_time * (0.9905 - 0.15 * gas) * largest_radius / (largest_radius + capillary_length))
 
 
-def lifetime(largest_radius: Values, overpressure: Values, fluid: Fluid, gas: Values, prolongation: Values) -> Values:
+def lifetime(largest_radius: Values, overpressure: Values, fluid: Fluid, gas: Values, prolongation: Values) -> Array:
     """Return the time from the laser pulse to the first collapse [s]; parameters as in `collapse_time`."""
     collapse = collapse_time(largest_radius, overpressure, fluid, gas, prolongation)
     return collapse + growth_time(collapse, largest_radius, overpressure, fluid.surface_tension, gas)
 
 
-def radius_at(time: Values, largest_radius: Values, growth: Values, collapse: Values) -> Values:
+def radius_at(time: Values, largest_radius: Values, growth: Values, collapse: Values) -> Array:
     """Return the radius at a time after the laser pulse [m]: zero before it and after the first collapse.
 
     Parameters
@@ -156,5 +156,5 @@ def radius_at(time: Values, largest_radius: Values, growth: Values, collapse: Va
     half = np.maximum(np.where(from_largest < 0.0, growth, collapse), SHORTEST_HALF)
     u = np.minimum((from_largest / half) ** 2, 1.0)
     polylogarithm = u * (0.9719 + u * (0.3393 + 0.1638 * u**6))
-    radius: Values = largest_radius * (1.0 - u) ** 0.4 * (1.0 - 0.01832099 * polylogarithm)
+    radius: Array = largest_radius * (1.0 - u) ** 0.4 * (1.0 - 0.01832099 * polylogarithm)
     return radius

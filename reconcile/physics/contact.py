@@ -4,10 +4,10 @@ from __future__ import annotations
 
 import numpy as np
 
-from reconcile.physics.matter import Fluid, Metal, Values
+from reconcile.physics.matter import Array, Fluid, Metal, Values
 
 
-def contact_velocity(pressure: Values, metal: Metal, fluid: Fluid) -> Values:
+def contact_velocity(pressure: Values, metal: Metal, fluid: Fluid) -> Array:
     """Return the velocity of the metal-liquid contact when the pressure is released [m/s].
 
     Parameters
@@ -23,28 +23,26 @@ def contact_velocity(pressure: Values, metal: Metal, fluid: Fluid) -> Values:
     """
     stiffening = np.sqrt(1.0 + 4.0 * metal.hugoniot_slope / (metal.density * metal.sound_speed**2) * pressure)
     both = 0.5 * metal.impedance * (1.0 + stiffening) + fluid.impedance
-    velocity: Values = (
-        2.0 * pressure / (both + np.sqrt(both**2 + 4.0 * fluid.density * fluid.hugoniot_slope * pressure))
-    )
+    velocity: Array = 2.0 * pressure / (both + np.sqrt(both**2 + 4.0 * fluid.density * fluid.hugoniot_slope * pressure))
     return velocity
 
 
-def contact_pressure(velocity: Values, fluid: Fluid) -> Values:
+def contact_pressure(velocity: Values, fluid: Fluid) -> Array:
     """Return the pressure of the liquid at the contact [Pa] for its velocity [m/s], on the liquid's shock line."""
-    return fluid.density * (fluid.sound_speed + fluid.hugoniot_slope * velocity) * velocity
+    return np.asarray(fluid.density * (fluid.sound_speed + fluid.hugoniot_slope * velocity) * velocity)
 
 
-def drag_time(depth: Values, metal: Metal, fluid: Fluid) -> Values:
+def drag_time(depth: Values, metal: Metal, fluid: Fluid) -> Array:
     """Return the time in which the liquid slows a layer of heated depth `depth` [m], acoustically [s]."""
-    return metal.density / fluid.impedance * depth
+    return np.asarray(metal.density / fluid.impedance * depth)
 
 
-def mach_ratio(velocity: Values, fluid: Fluid) -> Values:
+def mach_ratio(velocity: Values, fluid: Fluid) -> Array:
     """Return how much the liquid stiffens at that contact velocity [1]: slope × velocity / sound speed."""
-    return fluid.hugoniot_slope / fluid.sound_speed * velocity
+    return np.asarray(fluid.hugoniot_slope / fluid.sound_speed * velocity)
 
 
-def deceleration(velocity: Values, drag_time: Values, mach_ratio: Values) -> Values:
+def deceleration(velocity: Values, drag_time: Values, mach_ratio: Values) -> Array:
     """Return the deceleration of the layer as it starts [m/s²].
 
     Parameters
@@ -59,4 +57,4 @@ def deceleration(velocity: Values, drag_time: Values, mach_ratio: Values) -> Val
     u = u0 e^(-t/τ)/(1 + M (1 - e^(-t/τ))): within 0.25 % of the same drag with Rice-Walsh water up to 1 km/s.
 
     """
-    return velocity / drag_time * (1.0 + mach_ratio)
+    return np.asarray(velocity / drag_time * (1.0 + mach_ratio))

@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import numpy as np
 
-from reconcile.physics.matter import Fluid, Metal, Values
+from reconcile.physics.matter import Array, Fluid, Metal, Values
 
 WAVELENGTH_POWER = 1.397  # fitted: wavelength within 3.8 % of the exact root
 RATE_POWER = 2.628  # fitted: growth rate within 2.2 % of the exact root
@@ -18,9 +18,9 @@ VISCOUS_WAVENUMBER = 1.0 / 0.933
 VISCOUS_RATE = 0.942
 
 
-def _capillary_wavenumber(deceleration: Values, metal: Metal, fluid: Fluid, surface_tension: Values) -> Values:
+def _capillary_wavenumber(deceleration: Values, metal: Metal, fluid: Fluid, surface_tension: Values) -> Array:
     """Return the fastest wavenumber without viscosity [1/m] (Bellman and Pennington, Q. Appl. Math. 12, 151, 1954)."""
-    wavenumber: Values = np.sqrt((metal.melt_density - fluid.contact_density) / 3.0 * deceleration / surface_tension)
+    wavenumber: Array = np.sqrt((metal.melt_density - fluid.contact_density) / 3.0 * deceleration / surface_tension)
     return wavenumber
 
 
@@ -28,14 +28,14 @@ def _atwood(metal: Metal, fluid: Fluid) -> float:
     return (metal.melt_density - fluid.contact_density) / (metal.melt_density + fluid.contact_density)
 
 
-def _kinematic_viscosity(metal: Metal, fluid: Fluid, viscosity: Values) -> Values:
+def _kinematic_viscosity(metal: Metal, fluid: Fluid, viscosity: Values) -> Array:
     """Return the viscosity that both sides share [m²/s]."""
-    return (viscosity + fluid.contact_viscosity) / (metal.melt_density + fluid.contact_density)
+    return np.asarray((viscosity + fluid.contact_viscosity) / (metal.melt_density + fluid.contact_density))
 
 
 def fastest_wavelength(
     deceleration: Values, metal: Metal, fluid: Fluid, surface_tension: Values, viscosity: Values
-) -> Values:
+) -> Array:
     """Return the wavelength that grows fastest [m].
 
     Parameters
@@ -55,15 +55,13 @@ def fastest_wavelength(
     return 2.0 * np.pi / capillary * joined ** (1.0 / WAVELENGTH_POWER)
 
 
-def fastest_rate(
-    deceleration: Values, metal: Metal, fluid: Fluid, surface_tension: Values, viscosity: Values
-) -> Values:
+def fastest_rate(deceleration: Values, metal: Metal, fluid: Fluid, surface_tension: Values, viscosity: Values) -> Array:
     """Return the growth rate of the fastest wavelength [1/s]; parameters as in `fastest_wavelength`."""
     drive = _atwood(metal, fluid) * deceleration
     nu = _kinematic_viscosity(metal, fluid, viscosity)
     inviscid = np.sqrt(2.0 / 3.0 * drive * _capillary_wavenumber(deceleration, metal, fluid, surface_tension))
     viscous = VISCOUS_RATE * 0.5 * np.cbrt(drive**2 / nu)
-    rate: Values = inviscid * (1.0 + (inviscid / viscous) ** RATE_POWER) ** (-1.0 / RATE_POWER)
+    rate: Array = inviscid * (1.0 + (inviscid / viscous) ** RATE_POWER) ** (-1.0 / RATE_POWER)
     return rate
 
 
@@ -75,7 +73,7 @@ def log_gain(
     fluid: Fluid,
     surface_tension: Values,
     viscosity: Values,
-) -> Values:
+) -> Array:
     """Return the logarithm of the largest growth while the layer slows down [1].
 
     Parameters
@@ -101,7 +99,7 @@ def median_diameter(
     fluid: Fluid,
     surface_tension: Values,
     viscosity: Values,
-) -> Values:
+) -> Array:
     """Return the number median of the particles' diameters [m].
 
     Parameters

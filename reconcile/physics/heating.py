@@ -2,12 +2,14 @@
 
 from __future__ import annotations
 
-from reconcile.physics.matter import Values
+import numpy as np
+
+from reconcile.physics.matter import Array, Values
 
 REFERENCE_FLUENCE = 1e3  # [J/m²] absorbed fluence at which the heated depth is stated
 
 
-def heated_depth(fluence: Values, depth_at_1kJ: Values, exponent: Values) -> Values:
+def heated_depth(fluence: Values, depth_at_1kJ: Values, exponent: Values) -> Array:
     """Return the energy depth of the heated layer [m]: absorbed fluence over energy density at the surface.
 
     Parameters
@@ -25,6 +27,6 @@ def heated_depth(fluence: Values, depth_at_1kJ: Values, exponent: Values) -> Val
     return depth_at_1kJ * (fluence / REFERENCE_FLUENCE) ** exponent
 
 
-def energy_density(fluence: Values, depth: Values) -> Values:
+def energy_density(fluence: Values, depth: Values) -> Array:
     """Return the energy density at the surface [J/m³] from absorbed fluence [J/m²] and heated depth there [m]."""
-    return fluence / depth
+    return np.asarray(fluence / depth)

@@ -8,8 +8,9 @@ from typing import TypeAlias
 import numpy as np
 from numpy.typing import NDArray
 
-# Every function of this package works element by element and broadcasts; a float in gives a float out.
-Values: TypeAlias = float | NDArray[np.float64]
+# Functions of the reduced model work element by element, broadcast, and return an array (numpy's float for floats).
+Array: TypeAlias = NDArray[np.float64]
+Values: TypeAlias = float | Array
 
 
 @dataclass(frozen=True, slots=True)

@@ -12,7 +12,7 @@ import numpy as np
 
 from reconcile.physics.contact import contact_velocity, drag_time
 from reconcile.physics.heating import energy_density
-from reconcile.physics.matter import Fluid, Metal, Values
+from reconcile.physics.matter import Array, Fluid, Metal, Values
 
 # Gauss-Legendre points over the part of the spot above threshold, as the share of the excess that is missing there.
 _NODES, _WEIGHTS = np.polynomial.legendre.leggauss(6)
@@ -41,17 +41,17 @@ class Source:
 class Pulse:
     """The triangular pulse at the probe's distance and angle, before absorption and probe."""
 
-    pressure: Values  # [Pa] peak
-    duration: Values  # [s] of the triangle
-    advance: Values  # [m] by which the front leads a sound wave
-    arrival_time: Values  # [s] of the front, after the laser pulse
-    plane_stretch: Values  # [1] by which the pulse lengthened while it was plane
-    spherical_stretch: Values  # [1] and while it spread
+    pressure: Array  # [Pa] peak
+    duration: Array  # [s] of the triangle
+    advance: Array  # [m] by which the front leads a sound wave
+    arrival_time: Array  # [s] of the front, after the laser pulse
+    plane_stretch: Array  # [1] by which the pulse lengthened while it was plane
+    spherical_stretch: Array  # [1] and while it spread
 
     @property
-    def integral(self) -> Values:
+    def integral(self) -> Array:
         """Time integral of the squared pressure [Pa² s]."""
-        return self.pressure**2 * self.duration / 3.0
+        return np.asarray(self.pressure**2 * self.duration / 3.0)
 
 
 def _spot(source: Source, metal: Metal, fluid: Fluid) -> tuple[Values, Values]:
@@ -65,7 +65,7 @@ def _spot(source: Source, metal: Metal, fluid: Fluid) -> tuple[Values, Values]:
     return on_axis, np.tensordot(WEIGHTS, shares, axes=1)
 
 
-def shock_energy(source: Source, metal: Metal, fluid: Fluid) -> Values:
+def shock_energy(source: Source, metal: Metal, fluid: Fluid) -> Array:
     """Return the energy of the shock that enters the liquid [J].
 
     Notes
@@ -76,7 +76,7 @@ def shock_energy(source: Source, metal: Metal, fluid: Fluid) -> Values:
     """
     velocity, mean_share = _spot(source, metal, fluid)
     area = 0.5 * np.pi * source.radius**2 * source.excess
-    return source.shock_factor * 0.5 * metal.density * source.depth * velocity**2 * area * mean_share
+    return np.asarray(source.shock_factor * 0.5 * metal.density * source.depth * velocity**2 * area * mean_share)
 
 
 def pressure_pulse(source: Source, standoff: Values, angle: Values, metal: Metal, fluid: Fluid) -> Pulse:
@@ -129,23 +129,23 @@ def pressure_pulse(source: Source, standoff: Values, angle: Values, metal: Metal
 
 def _smear(
     pulse: Pulse, response_time: Values, distance: Values, fluid: Fluid, fit: tuple[float, float, float]
-) -> Values:
+) -> Array:
     """Return the one response time over the pulse's duration that stands for probe and absorption together [1]."""
     factor, absorption_power, power = fit
     probe = response_time / pulse.duration
     absorption = np.sqrt(2.0 * fluid.sound_absorption * distance) / (2.0 * np.pi * pulse.duration)
-    smear: Values = (probe**power + (factor * absorption**absorption_power) ** power) ** (1.0 / power)
+    smear: Array = (probe**power + (factor * absorption**absorption_power) ** power) ** (1.0 / power)
     return smear
 
 
-def recorded_peak(pulse: Pulse, response_time: Values, distance: Values, fluid: Fluid) -> Values:
+def recorded_peak(pulse: Pulse, response_time: Values, distance: Values, fluid: Fluid) -> Array:
     """Return the peak pressure that a probe records [Pa]; parameters and limits as in `recorded_integral`."""
     x = _smear(pulse, response_time, distance, fluid, (2.175, 1.731, 1.095))
-    peak: Values = pulse.pressure * (1.0 - x * np.log1p(1.0 / x))
+    peak: Array = pulse.pressure * (1.0 - x * np.log1p(1.0 / x))
     return peak
 
 
-def recorded_integral(pulse: Pulse, response_time: Values, distance: Values, fluid: Fluid) -> Values:
+def recorded_integral(pulse: Pulse, response_time: Values, distance: Values, fluid: Fluid) -> Array:
     """Return the time integral of the squared pressure that a probe records [Pa² s].
 
     Parameters
@@ -164,7 +164,7 @@ def recorded_integral(pulse: Pulse, response_time: Values, distance: Values, flu
     return pulse.integral * _triangle_share(x)
 
 
-def _triangle_share(x: Values) -> Values:
+def _triangle_share(x: Values) -> Array:
     """Return the share of a triangle's ∫p²dt that one pole of response time x × duration leaves.
 
     1 - 1.5 x + 3 x³ - 3 (x² + x³) exp(-1/x); for a slow probe its leading terms cancel, so there its series in 1/x.
@@ -177,7 +177,7 @@ def _triangle_share(x: Values) -> Values:
         series = y * (coefficient + series)
     fast_x = np.where(slow, 1.0, x)
     fast = 1.0 - 1.5 * fast_x + 3.0 * fast_x**3 - 3.0 * (fast_x**2 + fast_x**3) * np.exp(-1.0 / fast_x)
-    share: Values = np.where(slow, series, fast)
+    share: Array = np.where(slow, series, fast)
     return share
 
 
