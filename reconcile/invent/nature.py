@@ -1,9 +1,9 @@
 """What a shot does, with more physics than the reduced model holds.
 
 The bubble grows and collapses by the integrated Keller-Miksis equation; the contact moves by gold's release into
-Rice-Walsh water; particles come from the wavelength that the viscous dispersion relation amplifies most while water
-slows the layer. Craters follow the removal law itself, and sound follows the reduced chain, started with the fuller
-contact velocity: what single shots do beyond that is drawn as scatter where readings are made.
+Rice-Walsh water; particles come from the wavelength that the exact viscous theory amplifies most while water slows
+the layer. Craters follow the removal law itself, and sound follows the reduced chain, started with the fuller contact
+velocity: what single shots do beyond that is drawn as scatter where readings are made.
 """
 
 from __future__ import annotations
@@ -16,7 +16,7 @@ from scipy.optimize import brentq
 from reconcile.invent.truth import Truth
 from reconcile.physics import beam, bubble, contact, fragments, heating, removal, sound
 from reconcile.physics.matter import Fluid, Metal
-from reconcile.physics.solvers import bubble_motion, layer_drag
+from reconcile.physics.solvers import bubble_motion, interface, layer_drag
 
 PRESSURE = 101_325.0  # [Pa] ambient
 HEIGHT = 6e-3  # [m] of the water above the target
@@ -179,19 +179,16 @@ def _sound(truth: Truth, absorbed: float, excess: float) -> tuple[sound.Pulse, f
 
 
 def _growth_rate(truth: Truth) -> layer_drag.GrowthRate:
-    """Return the growth rate of a ripple on the contact [1/s] by wavenumber [1/m] and deceleration [m/s²].
-
-    sqrt(At g k − sigma k³/(rho1 + rho2) + nu² k⁴) − nu k², nu = (mu1 + mu2)/(rho1 + rho2): Mikaelian 1993, Phys Rev E
-    47, 375 (from memory).
-    """
-    both = GOLD.melt_density + WATER.contact_density
-    atwood = (GOLD.melt_density - WATER.contact_density) / both
-    tension = truth["melt_surface_tension"] / both
-    nu = (truth["melt_viscosity"] + WATER.contact_viscosity) / both
+    """Return the growth rate of a ripple on the contact [1/s] by wavenumber [1/m] and deceleration [m/s²]."""
+    contact_of = interface.Interface(
+        heavy_density=GOLD.melt_density,
+        light_density=WATER.contact_density,
+        heavy_viscosity=truth["melt_viscosity"],
+        light_viscosity=WATER.contact_viscosity,
+        surface_tension=truth["melt_surface_tension"],
+    )
 
     def rate(wavenumber: float, deceleration: float) -> float:
-        k2 = wavenumber * wavenumber
-        drive = atwood * deceleration * wavenumber - tension * k2 * wavenumber + nu * nu * k2 * k2
-        return float(np.sqrt(max(drive, 0.0))) - nu * k2
+        return interface.growth_rate(wavenumber, deceleration, contact_of)
 
     return rate

@@ -49,7 +49,7 @@ def released_velocity(pressure: float, metal: Metal) -> float:
     return float(brentq(imbalance, 0.0, start, xtol=1e-9, rtol=1e-13))
 
 
-def slowing(velocity: float, mass: float, *, spans: float = 6.0, points: int = 31) -> Slowing:
+def slowing(velocity: float, mass: float, *, spans: float = 12.0, points: int = 121) -> Slowing:
     """Follow a layer that water slows: mass × du/dt = −rho Us(u) u.
 
     Parameters
