@@ -131,9 +131,11 @@ def _flagged_shot(result: ShotResult, readings: Sequence[ReadingResult]) -> Iter
         f"probability of a misread energy {probability(result.p_misread)}."
     )
     reasons = list(result.reasons)
-    if shot.set_aside is not None:
-        reasons.append(f"Set aside: {shot.set_aside}. Its fluence follows from the log alone.")
-    if shot.kept is not None:
+    if shot.set_aside is not None and not any(shot.set_aside in reason for reason in reasons):
+        reasons.append(f"Set aside: {shot.set_aside}.")
+    if result.verdict == "set-aside":
+        reasons.append("Its fluence follows from the log alone.")
+    if shot.kept is not None and not any(shot.kept in reason for reason in reasons):
         reasons.append(f"Kept on a person's word: {shot.kept}.")
     if reasons:
         yield Listing(tuple(reasons))
