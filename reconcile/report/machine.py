@@ -257,9 +257,21 @@ def _netcdf_name(name: str, taken: set[str]) -> str:
     return candidate
 
 
+def printable(text: str) -> str:
+    """Return text without the control characters that a spreadsheet cannot hold; unpaired surrogates become U+FFFD."""
+    kept = []
+    for character in text:
+        code = ord(character)
+        if 0xD800 <= code <= 0xDFFF or code in (0xFFFE, 0xFFFF):
+            kept.append("\ufffd")
+        elif character in "\t\r\n" or not (code < 0x20 or 0x7F <= code < 0xA0):
+            kept.append(character)
+    return "".join(kept)
+
+
 def spreadsheet_text(text: str) -> str:
-    """Return text that a spreadsheet program will not take for a formula, without the control characters that it cannot hold."""
-    kept = "".join(character for character in text if character in "\t\r\n" or not (ord(character) < 0x20 or ord(character) == 0x7F))
+    """Return text that a spreadsheet program will not take for a formula when it opens a CSV file."""
+    kept = printable(text)
     return "'" + kept if kept.startswith(("=", "+", "-", "@", "\t", "\r")) else kept
 
 
