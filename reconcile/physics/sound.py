@@ -79,6 +79,28 @@ def shock_energy(source: Source, metal: Metal, fluid: Fluid) -> Array:
     return np.asarray(source.shock_factor * 0.5 * metal.density * source.depth * velocity**2 * area * mean_share)
 
 
+def stretch_on_spreading(
+    mach: Values, duration: Values, source_radius: Values, distance: Values, fluid: Fluid
+) -> Array:
+    """Return the factor by which a triangular pulse lengthens as it spreads, and by which it falls below 1/r [1].
+
+    Parameters
+    ----------
+    mach : peak particle velocity over sound speed at the source radius [1].
+    duration : of the triangle there [s].
+    source_radius, distance : where spreading starts, and to where [m].
+
+    Notes
+    -----
+    √(1 + K/2 ln(1 + r²/r0²)) with K = nonlinearity × mach × r0/(c × duration): the weak shock at the head of a triangle
+    eats it up (G. B. Whitham, Linear and Nonlinear Waves, 1974, ch. 9; from memory), from a source of finite size.
+
+    """
+    steepening = fluid.nonlinearity * mach * source_radius / (fluid.sound_speed * duration)
+    stretch: Array = np.sqrt(1.0 + 0.5 * steepening * np.log1p((distance / source_radius) ** 2))
+    return stretch
+
+
 def pressure_pulse(source: Source, standoff: Values, angle: Values, metal: Metal, fluid: Fluid) -> Pulse:
     """Return the pulse at the probe.
 
@@ -110,10 +132,10 @@ def pressure_pulse(source: Source, standoff: Values, angle: Values, metal: Metal
     plane_duration = start_duration * plane_stretch
 
     source_radius = 0.5 * source.radius * np.sqrt(source.shock_factor * mean_share * excess)
-    steepening = fluid.nonlinearity * (mach / plane_stretch) * source_radius / (c * plane_duration)
-    spherical_stretch = np.sqrt(1.0 + 0.5 * steepening * np.log1p((standoff / source_radius) ** 2))
+    plane_mach = mach / plane_stretch
+    spherical_stretch = stretch_on_spreading(plane_mach, plane_duration, source_radius, standoff, fluid)
     duration = plane_duration * spherical_stretch
-    average = fluid.density * c**2 * (mach / plane_stretch) * (source_radius / standoff) / spherical_stretch
+    average = fluid.density * c**2 * plane_mach * (source_radius / standoff) / spherical_stretch
 
     # The run is above zero, so the width is too and the root needs no limit.
     width = 2.0 * run / (c * duration)
