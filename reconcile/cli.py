@@ -70,7 +70,7 @@ def _make_consoles_safe() -> None:
 
 def _say(*lines: str) -> None:
     """Print results on standard output."""
-    print(*lines, sep="\n")
+    print(*lines, sep="\n", flush=True)  # a closed pipe must show here, not when the interpreter ends
 
 
 def _complain(*lines: str) -> None:
