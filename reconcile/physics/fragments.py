@@ -110,7 +110,7 @@ def median_diameter(
 
     Notes
     -----
-    2.3 (1 + M)^0.3 × fastest wavelength is the mode with the largest integrated gain, within 6 %.
+    2.3 (1 + M)^0.3 × fastest wavelength is the mode with the largest integrated gain, within 8 % up to 2 km/s.
 
     """
     wavelength = fastest_wavelength(deceleration, metal, fluid, surface_tension, viscosity)
