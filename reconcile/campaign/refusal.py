@@ -41,7 +41,7 @@ class Refusal(Exception):
         """The refusal without its address."""
         return f"found {self.found}; expected {self.expected}. {self.remedy}"
 
-    def __reduce__(self) -> tuple:
+    def __reduce__(self) -> tuple[object, ...]:
         """Survive the way back from a worker process."""
         return _rebuild, (self.place, self.found, self.expected, self.remedy)
 
