@@ -93,7 +93,9 @@ def test_gain_and_grown_wavelength_are_those_of_rates_integrated_while_the_layer
     [
         (30e-6, 0.003, 0.0728, 1e-3),
         (86e-6, 0.0, 0.0728, 1e-3),
+        (25e-6, 0.003, 0.0728, 3e-3),
         (200e-6, 0.01, 0.05, 3e-3),
+        (50e-6, 0.003, 0.02, 0.3e-3),
         (1e-3, 0.01, 0.0728, 1e-3),
     ],
 )
@@ -102,14 +104,14 @@ def test_collapse_growth_and_radius_are_those_of_integrated_motion(largest, gas,
     full = motion(largest, liquid, gas)
     water = dataclasses.replace(WATER, sound_speed=1482.0, surface_tension=sigma, viscosity=mu)
     collapse = float(bubble.collapse_time(largest, liquid.overpressure, water, gas, 1.0))
-    growth = float(bubble.growth_time(collapse, largest, liquid.overpressure, sigma, gas))
+    growth = float(bubble.growth_time(collapse, largest, liquid.overpressure, water, gas))
     assert collapse == pytest.approx(full.collapse_time, rel=6.3e-4)
-    assert growth == pytest.approx(full.growth_time, rel=1e-3 if mu < 2e-3 else 3e-3)
+    assert growth == pytest.approx(full.growth_time, rel=1e-3)
     lifetime = float(bubble.lifetime(largest, liquid.overpressure, water, gas, 1.0))
-    assert lifetime == pytest.approx(full.lifetime, rel=8e-4 if mu < 2e-3 else 1.8e-3)  # half of each error
+    assert lifetime == pytest.approx(full.lifetime, rel=8.2e-4)  # half of each error
     time = np.linspace(0.02, 0.98, 97) * full.lifetime
     exact = full.radius(time)
     formula = bubble.radius_at(time, largest, growth, collapse)
     upper = exact > 0.5 * largest
-    limit = 0.013 if gas <= 3e-3 else 0.023
-    assert np.abs(formula[upper] / exact[upper] - 1).max() < limit
+    limit = 0.011 if gas <= 3e-3 else 0.017
+    assert np.abs(formula - exact)[upper].max() / largest < limit

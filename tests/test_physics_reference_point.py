@@ -48,7 +48,7 @@ def chain(pulses: int = 1, angle: float = 0.0) -> dict[str, Any]:
     energy = bubble.bubble_energy(fluence, excess, SPOT, 0.1, 0.0)
     largest = bubble.largest_radius(energy, OVERPRESSURE, WATER.surface_tension)
     collapse = bubble.collapse_time(largest, OVERPRESSURE, WATER, GAS, 1.03)
-    growth = bubble.growth_time(collapse, largest, OVERPRESSURE, WATER.surface_tension, GAS)
+    growth = bubble.growth_time(collapse, largest, OVERPRESSURE, WATER, GAS)
     radii = bubble.radius_at(np.array([2e-6, 8e-6, 12e-6]), largest, growth, collapse)
     return {
         "threshold fluence": threshold,

@@ -73,7 +73,7 @@ def observables(
     largest = bubble.largest_radius(energy, OVERPRESSURE, WATER.surface_tension)
     prolongation = p["prolongation"] * bubble.boundary_factor(largest, 3e-3, 8e-3)
     collapse = bubble.collapse_time(largest, OVERPRESSURE, WATER, p["gas"], prolongation)
-    growth = bubble.growth_time(collapse, largest, OVERPRESSURE, WATER.surface_tension, p["gas"])
+    growth = bubble.growth_time(collapse, largest, OVERPRESSURE, WATER, p["gas"])
     return {
         "crater depth": removal.crater_depth(*crater),
         "crater diameter": removal.crater_diameter(excess, p["spot"]),
