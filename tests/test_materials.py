@@ -6,6 +6,7 @@ import dataclasses
 from pathlib import Path
 
 import pytest
+from iapws import IAPWS95
 
 from reconcile.campaign.campaign import Beam, Campaign, EnergyMeter, Liquid, Quantity, Table, Target
 from reconcile.campaign.materials import (
@@ -58,10 +59,9 @@ def test_water_at_20_degrees_is_iapws():
 
 @pytest.mark.parametrize("celsius", [5.0, 6.5, 12.2, 17.5, 22.0, 27.5, 34.0, 36.0, 44.0, 47.5, 50.0])
 def test_water_between_the_rows_is_iapws_within_a_ten_thousandth(celsius):
-    iapws = pytest.importorskip("iapws")
     kelvin = celsius + 273.15
-    state = iapws.IAPWS95(T=kelvin, P=0.101325)
-    vapour = iapws.IAPWS95(T=kelvin, x=0.0)
+    state = IAPWS95(T=kelvin, P=0.101325)
+    vapour = IAPWS95(T=kelvin, x=0.0)
     water = properties_of_liquid(campaign(celsius=celsius))
     assert water.density == pytest.approx(state.rho, rel=2e-5)
     assert water.sound_speed == pytest.approx(state.w, rel=1e-4)

@@ -130,7 +130,7 @@ def growth_time(
     0.1 % for radii of 25 µm to 1 mm, surface tensions of 0.02 to 0.073 N/m, viscosities of 0.3 to 3 mPa s, gas up to 0.01.
 
     """
-    viscous_length = 2.067 * fluid.viscosity / np.sqrt(fluid.density * overpressure)
+    viscous_length = 2.0633 * fluid.viscosity / np.sqrt(fluid.density * overpressure)
     return np.asarray(collapse_time * (0.9905 - 0.15 * gas) * largest_radius / (largest_radius + viscous_length))
 
 
