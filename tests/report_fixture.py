@@ -169,7 +169,16 @@ def _shots(rng: np.random.Generator, count: int, hostile: bool) -> list[ShotResu
             "stray": ("the crater depth lies 6.2 sd below what the other readings expect",),
         }.get(verdict, ())
         results.append(
-            ShotResult(shot, summary(incident * 0.31), summary(incident), ratio, 0.03, 0.998 if i == 1 else 0.004, verdict, reasons)
+            ShotResult(
+                shot,
+                summary(incident * 0.31),
+                summary(incident),
+                ratio,
+                0.03,
+                0.998 if i == 1 else 0.004,
+                verdict,
+                reasons,
+            )
         )
     return results
 
@@ -215,7 +224,11 @@ def _readings(rng: np.random.Generator, shots: list[ShotResult], hostile: bool) 
                     set_aside=shot.set_aside,
                 )
                 fitted = shot.set_aside is None
-                results.append(ReadingResult(reading, expected if fitted else None, 0.04 * expected if fitted else None, p_stray, verdict))
+                results.append(
+                    ReadingResult(
+                        reading, expected if fitted else None, 0.04 * expected if fitted else None, p_stray, verdict
+                    )
+                )
         if i % 4 == 0:
             volume = Reading("crater-volume", shot.name, None, "profiler", Place("maps/a.tif"), value=4.2e-17, u=3e-18)
             results.append(ReadingResult(volume, None, None, None, "information"))
@@ -240,17 +253,32 @@ def _gathered(shots: list[ShotResult], readings: list[ReadingResult], hostile: b
         campaign=invented_campaign(hostile=hostile),
         shots=tuple(result.shot for result in shots),
         readings=tuple(result.reading for result in readings),
-        refused=(Refused("frames/s031_800ns.png", text), Refused("@shots.xlsx!log!B40", "found 'n/a'; expected an energy above 0")),
+        refused=(
+            Refused("frames/s031_800ns.png", text),
+            Refused("@shots.xlsx!log!B40", "found 'n/a'; expected an energy above 0"),
+        ),
         notes=(Note("shots.xlsx!log!A14", f"-1 {text}"),),
         decisions=(
-            Decision(shots[0].shot.name, None, None, None, "keep", text, FOREIGN if hostile else "M. Ashgrove", "2026-03-15", Place("d.csv")),
+            Decision(
+                shots[0].shot.name,
+                None,
+                None,
+                None,
+                "keep",
+                text,
+                FOREIGN if hostile else "M. Ashgrove",
+                "2026-03-15",
+                Place("d.csv"),
+            ),
         ),
         files=(FileRead("shots.xlsx", "a1" * 32), FileRead("radii.csv", "b2" * 32)),
         unasked=("old/notes.txt", SCRIPT if hostile else "holiday.jpg"),
     )
 
 
-def invented_close_out(count: int = 12, *, hostile: bool = False, seed: int = 5, status: str = "provisional") -> CloseOut:
+def invented_close_out(
+    count: int = 12, *, hostile: bool = False, seed: int = 5, status: str = "provisional"
+) -> CloseOut:
     """Return a close-out of `count` shots; `hostile` puts text into it that no output may take for anything but text."""
     rng = np.random.default_rng(seed)
     inputs, posterior = _inputs(rng, 4, 250)
@@ -280,14 +308,30 @@ def invented_close_out(count: int = 12, *, hostile: bool = False, seed: int = 5,
         shots=tuple(shots),
         readings=tuple(readings),
         kinds=(
-            KindResult("crater-depth", used["crater-depth"], 0.0004, False, "Its craters are deeper than the bubbles allow."),
+            KindResult(
+                "crater-depth", used["crater-depth"], 0.0004, False, "Its craters are deeper than the bubbles allow."
+            ),
             KindResult("bubble-radius", used["bubble-radius"], 0.41, True, ""),
             KindResult("median-diameter", 1, None, None, sentence),
         ),
         strained=(Strained("spot_radius", 0.0011, "A wrong spot radius would be taken up by heated_depth."),),
         warnings=(
-            Warned("s002", "power above the self-focusing limit of the liquid", 4.1e6, 2.9e6, "W", "Lower the energy or widen the beam."),
-            Warned("campaign", f"{TYPESETTING} {FOREIGN}" if hostile else "no entry radius given", None, None, "", "Give beam.entry_radius."),
+            Warned(
+                "s002",
+                "power above the self-focusing limit of the liquid",
+                4.1e6,
+                2.9e6,
+                "W",
+                "Lower the energy or widen the beam.",
+            ),
+            Warned(
+                "campaign",
+                f"{TYPESETTING} {FOREIGN}" if hostile else "no entry radius given",
+                None,
+                None,
+                "",
+                "Give beam.entry_radius.",
+            ),
         ),
         could_not_tell=("The readings say nothing about the fragment factor.",),
         sampling=Sampling(1240.0, 1.004, 24000, 31.4, True, 1000, 0.02, 41000),
@@ -299,8 +343,12 @@ def invented_close_out(count: int = 12, *, hostile: bool = False, seed: int = 5,
 def without_a_number(close_out: CloseOut) -> CloseOut:
     """Return the same close-out with a NaN and an infinity where a fit might leave them."""
     first = close_out.shots[0]
-    broken = replace(first, energy_ratio=float("nan"), absorbed_fluence=replace(first.absorbed_fluence, q975=float("inf")))
-    return replace(close_out, shots=(broken, *close_out.shots[1:]), sampling=replace(close_out.sampling, max_rhat=float("nan")))
+    broken = replace(
+        first, energy_ratio=float("nan"), absorbed_fluence=replace(first.absorbed_fluence, q975=float("inf"))
+    )
+    return replace(
+        close_out, shots=(broken, *close_out.shots[1:]), sampling=replace(close_out.sampling, max_rhat=float("nan"))
+    )
 
 
 UNITS = {kind.unit for kind in KINDS.values()}

@@ -103,7 +103,8 @@ def as_data(report: Report) -> dict[str, Any]:
         "status_reasons": [plain(reason) for reason in report.status_reasons],
         "issued": report.issued,
         "sections": [
-            {"key": section.key, "title": section.title, "blocks": [_block(block) for block in section.blocks]} for section in report.sections
+            {"key": section.key, "title": section.title, "blocks": [_block(block) for block in section.blocks]}
+            for section in report.sections
         ],
     }
 
@@ -121,7 +122,10 @@ def _block(block: Block) -> dict[str, Any]:
                 "type": "table",
                 "caption": plain(block.caption),
                 "columns": [{"title": plain(column.title), "kind": column.kind} for column in block.columns],
-                "rows": [{"cells": [plain(cell) for cell in row], "flagged": i in block.flagged} for i, row in enumerate(block.rows)],
+                "rows": [
+                    {"cells": [plain(cell) for cell in row], "flagged": i in block.flagged}
+                    for i, row in enumerate(block.rows)
+                ],
             }
         case Drawing():
             return {

@@ -6,7 +6,7 @@ from collections.abc import Sequence
 from datetime import datetime
 
 from reconcile.inference.outcome import CloseOut
-from reconcile.report import findings, record
+from reconcile.report import findings, record, shots
 from reconcile.report.blocks import Drawing, Report
 from reconcile.report.first_page import first_page
 
@@ -23,10 +23,10 @@ def build(close_out: CloseOut, drawings: Sequence[Drawing], results_sha256: str,
         findings.inputs(close_out, group("inputs")),
         findings.kinds(close_out, group("kinds")),
         findings.strained(close_out),
-        findings.flagged_shots(close_out),
-        findings.energies(group("energies")),
-        findings.levels(close_out),
-        findings.flagged_readings(close_out),
+        shots.flagged_shots(close_out),
+        shots.energies(group("energies")),
+        shots.levels(close_out),
+        shots.flagged_readings(close_out),
         findings.budget(close_out),
         findings.warnings(close_out),
         findings.could_not_tell(close_out),
@@ -34,7 +34,7 @@ def build(close_out: CloseOut, drawings: Sequence[Drawing], results_sha256: str,
         record.decisions(close_out),
         record.instruments(close_out),
         record.method(close_out),
-        findings.fluences(close_out),
+        shots.fluences(close_out),
         record.provenance(close_out, results_sha256),
         record.cautions(),
         record.not_said(),
@@ -56,7 +56,11 @@ def build(close_out: CloseOut, drawings: Sequence[Drawing], results_sha256: str,
 def _who(close_out: CloseOut, now: datetime) -> list[str]:
     campaign = close_out.gathered.campaign
     lines = [f"Close-out of campaign {campaign.name}"]
-    lines += [f"{name.capitalize()}: {campaign.about[name]}" for name in ("laboratory", "operator", "place") if campaign.about.get(name)]
+    lines += [
+        f"{name.capitalize()}: {campaign.about[name]}"
+        for name in ("laboratory", "operator", "place")
+        if campaign.about.get(name)
+    ]
     if campaign.date:
         lines.append(f"Measured: {campaign.date}")
     lines.append(f"Issued: {now.date().isoformat()}")

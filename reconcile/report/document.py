@@ -24,6 +24,9 @@ _FALLBACK = Path(matplotlib.get_data_path()) / "fonts" / "ttf" / "DejaVuSans.ttf
 # A word longer than this may be broken anywhere: addresses, file names and checksums must not run out of their cell.
 LONGEST_WORD = 14
 
+# ISO 19005-2 (archival, level A) and ISO 14289-1 (accessible): the typesetter refuses what breaks their rules.
+STANDARDS = ("a-2a", "ua-1")
+
 _ABSENT_GLYPH = "\u25a1"  # □
 _BREAK = "\u200b"
 
@@ -50,19 +53,34 @@ def write_document(report: Report, figures: Path, path: Path, now: datetime) -> 
         shutil.copy(_TEMPLATE, root / "document.typ")
         (root / "fonts").mkdir()
         shutil.copy(_FALLBACK, root / "fonts")
-        for block in (block for section in data["sections"] for block in section["blocks"] if block["type"] == "drawing"):
+        for block in (
+            block for section in data["sections"] for block in section["blocks"] if block["type"] == "drawing"
+        ):
             block["file"] = block["vector"] or block["raster"]
             shutil.copy(figures / block["file"], root / block["file"])
-        path.write_bytes(
-            typst.compile(
-                root / "document.typ",
-                root=root,
-                font_paths=[root / "fonts"],
-                ignore_system_fonts=True,
-                sys_inputs={"report": json.dumps(data)},
-                format="pdf",
-            )
+        path.write_bytes(_typeset(root, json.dumps(data)))
+
+
+def _typeset(root: Path, data: str) -> bytes:
+    """Return the PDF: archival and accessible where its text allows, else merely tagged."""
+
+    def compiled(standards: Any) -> bytes:
+        made = typst.compile(
+            root / "document.typ",
+            root=root,
+            font_paths=[root / "fonts"],
+            ignore_system_fonts=True,
+            sys_inputs={"report": data},
+            format="pdf",
+            pdf_standards=standards,
         )
+        return bytes(made)
+
+    try:
+        return compiled(list(STANDARDS))
+    except typst.TypstError:
+        # Some rare character broke a rule of the profile: a report without the profile is better than none.
+        return compiled([])
 
 
 def _mapped(data: Any, change: Callable[[str], str], key: str = "") -> Any:

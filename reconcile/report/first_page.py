@@ -8,7 +8,7 @@ from collections.abc import Iterable
 from reconcile.campaign.kinds import KINDS
 from reconcile.inference.outcome import CloseOut, Share
 from reconcile.report.blocks import Block, Column, Section, Statement, Table
-from reconcile.report.lines import alone, count, estimate, interval, scale_for, share, skewed
+from reconcile.report.lines import alone, count, estimate, interval, scale_for, scale_of, share, skewed
 
 # What the answer is, in the words of a reader who has not seen the inputs' names.
 ANSWERS = {
@@ -18,6 +18,9 @@ ANSWERS = {
     "absorbed_fluence_per_energy": "Peak absorbed fluence per logged energy",
     "incident_fluence_per_energy": "Peak incident fluence per logged energy",
 }
+
+# A prior that holds less of the variance than this is not worth a measurement for its own sake.
+LEAST_WORTH_NAMING = 0.05
 
 
 def first_page(close_out: CloseOut) -> Section:
@@ -36,8 +39,10 @@ def _measured(close_out: CloseOut) -> Iterable[str]:
     path = f", {campaign.liquid.path.text} of it along the beam" if campaign.liquid.path else ""
     beam = campaign.beam
     yield (
-        f"What was measured: {campaign.target.material}{thickness} under {campaign.liquid.material}{path}; laser pulses of "
-        f"{beam.wavelength.text}, {beam.pulse_duration.text}, spot radius {beam.spot_radius.text} (1/e² intensity), delivery {beam.delivery.text}."
+        f"What was measured: {campaign.target.material}{thickness} under {campaign.liquid.material}{path}; "
+        "laser pulses of "
+        f"{beam.wavelength.text}, {beam.pulse_duration.text}, spot radius {beam.spot_radius.text} (1/e² "
+        f"intensity), delivery {beam.delivery.text}."
     )
     if not shots:
         return
@@ -51,7 +56,8 @@ def _measured(close_out: CloseOut) -> Iterable[str]:
     by_kind = Counter(result.reading.kind for result in close_out.readings)
     kinds = ", ".join(f"{KINDS[kind].words} ({by_kind[kind]})" for kind in KINDS if by_kind[kind])
     yield (
-        f"{count(len(shots), 'shot').capitalize()}, {scale.with_unit(range_words)} logged energy a pulse, {places} at a place. "
+        f"{count(len(shots), 'shot')}, {scale.with_unit(range_words)} logged energy a pulse, "
+        f"{places} at a place. "
         f"Readings: {kinds or 'none'}."
     )
 
@@ -64,12 +70,14 @@ def _answer(close_out: CloseOut) -> Iterable[Block]:
         if name not in known:
             continue
         summary = known[name].summary
-        scale = scale_for(known[name].entry.unit, [summary.median])
+        scale = scale_of(summary, known[name].entry.unit)
         any_skewed = any_skewed or skewed(summary)
         rows.append((words, estimate(summary, scale), interval(summary, scale), scale.label or "1"))
     columns = (Column("Quantity", "wide"), Column("Value", "number"), Column("95 % interval", "number"), Column("Unit"))
     yield Table("The answer", columns, tuple(rows))
-    skewed_words = " Where the distribution is skewed, its median with the 68 % interval in brackets." if any_skewed else ""
+    skewed_words = (
+        " Where the distribution is skewed, its median with the 68 % interval in brackets." if any_skewed else ""
+    )
     yield Statement(f"Value: mean ± one standard uncertainty (k = 1).{skewed_words} {_range(close_out)}", "quiet")
 
 
@@ -109,8 +117,9 @@ def _reading_counts(close_out: CloseOut) -> str:
         f"{found['set-aside']} set aside",
         f"{found['information']} for information only",
     ]
-    refused = len(close_out.gathered.refused)
-    return f"{count(len(close_out.readings), 'reading').capitalize()}: {', '.join(parts)}. {count(refused, 'entry', 'entries').capitalize()} refused on reading."
+    readings = count(len(close_out.readings), "reading")
+    refused = count(len(close_out.gathered.refused), "entry", "entries")
+    return f"{readings}: {', '.join(parts)}. {refused} refused on reading."
 
 
 def _leaning(close_out: CloseOut) -> Iterable[str]:
@@ -120,10 +129,17 @@ def _leaning(close_out: CloseOut) -> Iterable[str]:
             continue
         largest = ", ".join(_part(part) for part in parts[:4] if part.share >= 0.005)
         yield f"What the {name.replace('_', ' ')} leans on, by share of its variance: {largest}."
-    priors = [part for part in close_out.budget.get("absorbed_fraction", ()) if part.source not in ("readings", "absorbed_fraction")]
-    if priors:
-        most = max(priors, key=lambda part: part.share)
-        yield f"A better value of {most.source} from elsewhere would narrow the absorbed fraction most ({share(most.share)} of its variance)."
+    priors = [
+        part
+        for part in close_out.budget.get("absorbed_fraction", ())
+        if part.source not in ("readings", "absorbed_fraction")
+    ]
+    most = max(priors, key=lambda part: part.share, default=None)
+    if most is not None and most.share >= LEAST_WORTH_NAMING:
+        yield (
+            f"A better value of {most.source} from elsewhere would narrow the absorbed fraction most "
+            f"({share(most.share)} of its variance)."
+        )
 
 
 def _part(part: Share) -> str:

@@ -77,6 +77,11 @@ def scale_for(unit: str, values: Iterable[float | None], name: str = "") -> Scal
     return Scale(*(fitting[-1] if fitting else ladder[0]))
 
 
+def scale_of(summary: Summary, unit: str, name: str = "") -> Scale:
+    """Choose the unit for one distribution: by its median, or by its spread where that is larger."""
+    return scale_for(unit, [max(abs(summary.median), summary.sd)], name)
+
+
 def _fixed(value: float, place: int) -> str:
     """Return a number rounded to 10^place, ties to even, never in powers of ten, with a proper minus sign."""
     rounded = Decimal(repr(value)).quantize(Decimal(1).scaleb(place), rounding=ROUND_HALF_EVEN)
@@ -97,7 +102,9 @@ def alone(value: float | None, scale: Scale = Scale("", 1.0), digits: int = DIGI
         return "0"
     exponent = Decimal(repr(shown)).adjusted()
     if not -5 <= exponent <= 7:
-        mantissa = _trimmed(_fixed(shown / 10.0**exponent, 1 - digits)) if abs(exponent) < 300 else f"{shown:.{digits - 1}e}"
+        mantissa = (
+            _trimmed(_fixed(shown / 10.0**exponent, 1 - digits)) if abs(exponent) < 300 else f"{shown:.{digits - 1}e}"
+        )
         return f"{mantissa} × 10{_raised(exponent)}"
     return _trimmed(_fixed(shown, exponent - digits + 1))
 
@@ -144,8 +151,9 @@ def span(low: float, high: float, sd: float, scale: Scale) -> str:
 
 
 def skewed(summary: Summary) -> bool:
-    """Tell whether ± would mislead: the halves of the 95 % interval differ by more than a fifth, or its width from 3.92 sd by more than a tenth.
+    """Tell whether ± would mislead.
 
+    It does where the halves of the 95 % interval differ by more than a fifth, or its width from 3.92 sd by more than a tenth.
     Tighter bounds would answer to noise: at an effective sample size of 1 000 a normal distribution's halves differ by 6 % (one sd).
     """
     if not summary.sd > 0:
@@ -209,7 +217,7 @@ def plain(text: str, limit: int | None = None) -> str:
             kept.append(" " if character.isspace() else "")
         elif category == "Cs":
             kept.append("\ufffd")
-        elif character in _DIRECTIONS:
+        elif character in _UNSEEN:
             continue
         else:
             kept.append(character)
@@ -218,4 +226,5 @@ def plain(text: str, limit: int | None = None) -> str:
 
 
 # Characters that turn the direction of text: harmless in themselves, but they can make one sentence look like another.
-_DIRECTIONS = frozenset("\u202a\u202b\u202c\u202d\u202e\u2066\u2067\u2068\u2069")
+# And the byte-order mark, which archival documents may not hold.
+_UNSEEN = frozenset("\u202a\u202b\u202c\u202d\u202e\u2066\u2067\u2068\u2069\ufeff")

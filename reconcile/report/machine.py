@@ -14,6 +14,7 @@ from typing import Any
 import numpy as np
 
 from reconcile import __version__
+from reconcile.campaign.files import checksum_lines
 from reconcile.campaign.inputs import describe
 from reconcile.campaign.kinds import KINDS
 from reconcile.campaign.readings import FileRead, Reading
@@ -62,7 +63,8 @@ def results(close_out: CloseOut) -> dict[str, Any]:
         "inputs": {result.entry.name: _input(result) for result in close_out.inputs},
         "correlation": {"names": list(names), "matrix": [[number(cell) for cell in row] for row in matrix]},
         "budget": {
-            name: [{"source": part.source, "share": number(part.share)} for part in parts] for name, parts in close_out.budget.items()
+            name: [{"source": part.source, "share": number(part.share)} for part in parts]
+            for name, parts in close_out.budget.items()
         },
         "shots": [
             {
@@ -82,10 +84,16 @@ def results(close_out: CloseOut) -> dict[str, Any]:
         "refused": [{"source": refused.source, "reason": refused.reason} for refused in close_out.gathered.refused],
         "notes": [{"source": note.source, "note": note.note} for note in close_out.gathered.notes],
         "kinds": {
-            result.kind: {"n": int(result.n), "p_value": number(result.p_value), "agrees": None if result.agrees is None else bool(result.agrees)}
+            result.kind: {
+                "n": int(result.n),
+                "p_value": number(result.p_value),
+                "agrees": None if result.agrees is None else bool(result.agrees),
+            }
             for result in close_out.kinds
         },
-        "strained": [{"input": strained.input, "prior_tail": number(strained.prior_tail)} for strained in close_out.strained],
+        "strained": [
+            {"input": strained.input, "prior_tail": number(strained.prior_tail)} for strained in close_out.strained
+        ],
         "warnings": [
             {
                 "where": warned.where,
@@ -190,7 +198,9 @@ def _toml_input(result: InputResult) -> list[str]:
     }
     lines = [f"{key} = {toml_text(text)}" for key, text in texts.items()]
     # TOML has no null: what is not known is left out.
-    return lines + [f"{key} = {_toml_number(value)}" for key, value in numbers.items() if value is not None and math.isfinite(value)]
+    return lines + [
+        f"{key} = {_toml_number(value)}" for key, value in numbers.items() if value is not None and math.isfinite(value)
+    ]
 
 
 def _toml_number(value: float) -> str:
@@ -226,7 +236,12 @@ def write_posterior(posterior: Posterior, campaign: str, path: Path, created: st
     import h5netcdf
 
     chains, steps, _ = posterior.draws.shape
-    about = {"created_at": created, "inference_library": "reconcile", "inference_library_version": __version__, "campaign": campaign}
+    about = {
+        "created_at": created,
+        "inference_library": "reconcile",
+        "inference_library_version": __version__,
+        "campaign": campaign,
+    }
     taken: set[str] = set()
     with h5netcdf.File(path, "w") as file:
         file.attrs.update(about)
@@ -238,11 +253,15 @@ def write_posterior(posterior: Posterior, campaign: str, path: Path, created: st
             group.create_variable("draw", ("draw",), data=np.arange(steps, dtype=np.int64))
         for index, name in enumerate(posterior.names):
             variable = file["posterior"].create_variable(
-                _netcdf_name(name, taken), ("chain", "draw"), data=np.ascontiguousarray(posterior.draws[:, :, index], dtype=np.float64)
+                _netcdf_name(name, taken),
+                ("chain", "draw"),
+                data=np.ascontiguousarray(posterior.draws[:, :, index], dtype=np.float64),
             )
             variable.attrs["units"] = describe(name).unit
             variable.attrs["long_name"] = name
-        log_prob = file["sample_stats"].create_variable("lp", ("chain", "draw"), data=np.asarray(posterior.log_prob, dtype=np.float64))
+        log_prob = file["sample_stats"].create_variable(
+            "lp", ("chain", "draw"), data=np.asarray(posterior.log_prob, dtype=np.float64)
+        )
         log_prob.attrs["units"] = "1"
         log_prob.attrs["long_name"] = "logarithm of the posterior density, up to a constant"
 
@@ -281,7 +300,9 @@ def _write_csv(path: Path, header: Sequence[str], rows: Iterable[Sequence[str | 
         writer = csv.writer(file)
         writer.writerow(header)
         for row in rows:
-            writer.writerow("" if cell is None else spreadsheet_text(cell) if isinstance(cell, str) else repr(cell) for cell in row)
+            writer.writerow(
+                "" if cell is None else spreadsheet_text(cell) if isinstance(cell, str) else repr(cell) for cell in row
+            )
 
 
 def write_readings(readings: Iterable[ReadingResult], path: Path) -> None:
@@ -309,9 +330,5 @@ def write_refused(refused: Iterable[Refused], path: Path) -> None:
 
 def write_input_checksums(files: Iterable[FileRead], path: Path) -> None:
     """Write the SHA-256 of every input file as `sha256sum -c` reads it, paths relative to the campaign folder."""
-    lines = []
-    for file in files:
-        # GNU coreutils: a name with a backslash or a line break is written escaped, the line marked by a leading backslash.
-        escaped = file.path.replace("\\", "\\\\").replace("\n", "\\n").replace("\r", "\\r")
-        lines.append(f"{'' if escaped == file.path else chr(92)}{file.sha256}  {escaped}\n")
-    path.write_bytes("".join(lines).encode("utf-8", "surrogateescape"))
+    text = checksum_lines({file.path: file.sha256 for file in files})
+    path.write_bytes(text.encode("utf-8", "surrogateescape"))

@@ -15,7 +15,11 @@ _TEMPLATES = Path(__file__).parent
 def write_page(report: Report, figures: Path, path: Path) -> None:
     """Write report.html; `figures` is the folder of the figures' files, which are put inside the page."""
     environment = Environment(
-        loader=FileSystemLoader(_TEMPLATES, encoding="utf-8"), autoescape=True, undefined=StrictUndefined, trim_blocks=True, lstrip_blocks=True
+        loader=FileSystemLoader(_TEMPLATES, encoding="utf-8"),
+        autoescape=True,
+        undefined=StrictUndefined,
+        trim_blocks=True,
+        lstrip_blocks=True,
     )
     environment.filters["inline"] = lambda block: _inline(figures, block["vector"] or block["raster"])
     text = environment.get_template("page.html").render(report=as_data(report))

@@ -26,7 +26,9 @@ def refused(close_out: CloseOut) -> Section:
         blocks.append(Statement("Nothing was refused."))
     if gathered.notes:
         columns = (Column("Source"), Column("Note", "wide"))
-        blocks.append(Table("Notes taken on reading", columns, tuple((item.source, item.note) for item in gathered.notes)))
+        blocks.append(
+            Table("Notes taken on reading", columns, tuple((item.source, item.note) for item in gathered.notes))
+        )
     if gathered.unasked:
         blocks += [Statement("Files in the campaign folder that no table asked for:"), Listing(gathered.unasked)]
     else:
@@ -37,7 +39,15 @@ def refused(close_out: CloseOut) -> Section:
 def decisions(close_out: CloseOut) -> Section:
     """Return each decision of a person that holds, and the remarks in the log."""
     rows = [
-        (item.shot or item.sample or ABSENT, item.kind or "all", item.source or "all", item.decision, item.reason, item.by, item.on)
+        (
+            item.shot or item.sample or ABSENT,
+            item.kind or "all",
+            item.source or "all",
+            item.decision,
+            item.reason,
+            item.by,
+            item.on,
+        )
         for item in close_out.gathered.decisions
     ]
     columns = (
@@ -49,7 +59,11 @@ def decisions(close_out: CloseOut) -> Section:
         Column("By"),
         Column("On"),
     )
-    blocks: list[Block] = [Table("Decisions", columns, tuple(rows)) if rows else Statement("No person decided anything about a shot or a reading.")]
+    blocks: list[Block] = [
+        Table("Decisions", columns, tuple(rows))
+        if rows
+        else Statement("No person decided anything about a shot or a reading.")
+    ]
     remarks = [(shot.name, shot.note) for shot in close_out.gathered.shots if shot.note]
     if remarks:
         blocks.append(Table("Remarks in the log", (Column("Shot"), Column("Remark", "wide")), tuple(remarks)))
@@ -63,10 +77,19 @@ def instruments(close_out: CloseOut) -> Section:
     tables = (Column("Table"), Column("Kind"), Column("File", "wide"), Column("Shared by its readings", "wide"))
     rows = tuple((of, name, text) for of, name, text in _stated(campaign))
     read = tuple(
-        (table.name, table.kind, table.file or table.files or "a list", "; ".join(_shared(table.scale, table.pixel_pitch, table.about)) or ABSENT)
+        (
+            table.name,
+            table.kind,
+            table.file or table.files or "a list",
+            "; ".join(_shared(table.scale, table.pixel_pitch, table.about)) or ABSENT,
+        )
         for table in campaign.tables
     )
-    return Section("instruments", "Instruments and conditions", (Table("As the manifest states", columns, rows), Table("Tables of readings", tables, read)))
+    return Section(
+        "instruments",
+        "Instruments and conditions",
+        (Table("As the manifest states", columns, rows), Table("Tables of readings", tables, read)),
+    )
 
 
 def _stated(campaign: Campaign) -> Iterable[tuple[str, str, str]]:
@@ -90,7 +113,15 @@ def _stated(campaign: Campaign) -> Iterable[tuple[str, str, str]]:
         ("energy meter", "shot jitter", meter.shot_jitter),
     ]
     if probe is not None:
-        names = ("standoff", "angle", "aperture", "sensitivity", "sensitivity_uncertainty", "bandwidth", "trigger_offset")
+        names = (
+            "standoff",
+            "angle",
+            "aperture",
+            "sensitivity",
+            "sensitivity_uncertainty",
+            "bandwidth",
+            "trigger_offset",
+        )
         parts += [("probe", name.replace("_", " "), getattr(probe, name)) for name in names]
     yield "target", "material", campaign.target.material
     yield "liquid", "material", campaign.liquid.material
@@ -121,17 +152,25 @@ def method(close_out: CloseOut) -> Section:
         "Method",
         (
             Statement(
-                "A reduced model of ablation in liquids gives the expected value of every reading from the inputs and the shot's energy. Each shot has one deviation of its "
-                "delivered energy from its log, common to all its readings and integrated out; a shot's logged energy may be misread and a single "
-                "reading may be stray, each with a probability of its own (mixture of sound and stray readings: Hogg, Bovy and Lang 2010, "
-                "arXiv:1008.4686). Readings below a detection limit enter as such. Numbers that readings share (calibrations, scales, pixel "
-                "pitches) are inputs with priors. Uncertainties are stated as standard uncertainties (JCGM 100:2008) and as probability intervals "
+                "A reduced model of ablation in liquids gives the expected value of every reading from the "
+                "inputs and the shot's energy. Each shot has one deviation of its "
+                "delivered energy from its log, common to all its readings and integrated out; a shot's "
+                "logged energy may be misread and a single "
+                "reading may be stray, each with a probability of its own (mixture of sound and stray "
+                "readings: Hogg, Bovy and Lang 2010, "
+                "arXiv:1008.4686). Readings below a detection limit enter as such. Numbers that readings "
+                "share (calibrations, scales, pixel "
+                "pitches) are inputs with priors. Uncertainties are stated as standard uncertainties (JCGM "
+                "100:2008) and as probability intervals "
                 "of the sampled distribution (JCGM 101:2008)."
             ),
             Statement(
-                f"Sampling {state} its aim: {count(sampling.draws, 'draw')}, smallest effective sample size {alone(sampling.min_ess, digits=3)} "
-                f"(aimed at {sampling.target_ess}), largest R-hat {alone(sampling.max_rhat, digits=4)}, {sampling.evaluations} evaluations in "
-                f"{alone(sampling.seconds, digits=3)} s; largest error of the integration over a shot's energy {alone(sampling.integral_error, digits=2)} nat."
+                f"Sampling {state} its aim: {count(sampling.draws, 'draw')}, smallest effective sample size "
+                f"{alone(sampling.min_ess, digits=3)} "
+                f"(aimed at {sampling.target_ess}), largest R-hat {alone(sampling.max_rhat, digits=4)}, "
+                f"{sampling.evaluations} evaluations in "
+                f"{alone(sampling.seconds, digits=3)} s; largest error of the integration over a shot's "
+                f"energy {alone(sampling.integral_error, digits=2)} nat."
             ),
         ),
     )
@@ -144,15 +183,28 @@ def cautions() -> Section:
         "Cautions",
         (
             Statement(
-                "This report is no instruction for work. Local rules, the laboratory's own risk assessment, and licensed or appointed persons (laser safety officer, "
+                "This report is no instruction for work. Local rules, the laboratory's own risk assessment, "
+                "and licensed or appointed persons (laser safety officer, "
                 "electrical safety, chemical safety) go before anything written here."
             ),
             Listing(
                 (
-                    "Pulsed lasers of this kind are class 4: direct and scattered light injures eyes and skin and may start fires; liquid surfaces reflect.",
-                    "Colloids and dried residues hold nanoparticles: keep them from air, skin and drains by the local rules.",
-                    "Laser pulses in closed liquid cells raise pressure and may burst windows; ablation in organic liquids makes flammable gas.",
-                    "Laser heads, pulse drivers and probe amplifiers may hold high voltage after they are switched off.",
+                    (
+                        "Pulsed lasers of this kind are class 4: direct and scattered light injures eyes and "
+                        "skin and may start fires; liquid surfaces reflect."
+                    ),
+                    (
+                        "Colloids and dried residues hold nanoparticles: keep them from air, skin and drains by "
+                        "the local rules."
+                    ),
+                    (
+                        "Laser pulses in closed liquid cells raise pressure and may burst windows; ablation in "
+                        "organic liquids makes flammable gas."
+                    ),
+                    (
+                        "Laser heads, pulse drivers and probe amplifiers may hold high voltage after they are "
+                        "switched off."
+                    ),
                 )
             ),
         ),
@@ -167,11 +219,23 @@ def not_said() -> Section:
         (
             Listing(
                 (
-                    "It holds only for the shots, the target, the liquid and the instruments named here, and for the range of fluence on the first page.",
+                    (
+                        "It holds only for the shots, the target, the liquid and the instruments named here, and "
+                        "for the range of fluence on the first page."
+                    ),
                     "It claims no conformity with a standard and no accreditation.",
-                    "Peak fluences are those of a Gaussian beam of the stated radius at the surface; hot spots and a changed beam are not seen.",
-                    "Uncertainties are those of the inputs and readings as stated. An error that the manifest does not state, and that pulls all kinds the same way, stays unseen.",
-                    "The reduced model is a summary; where a warning above names a limit that was passed, its numbers hold less than they seem to.",
+                    (
+                        "Peak fluences are those of a Gaussian beam of the stated radius at the surface; hot "
+                        "spots and a changed beam are not seen."
+                    ),
+                    (
+                        "Uncertainties are those of the inputs and readings as stated. An error that the "
+                        "manifest does not state, and that pulls all kinds the same way, stays unseen."
+                    ),
+                    (
+                        "The reduced model is a summary; where a warning above names a limit that was passed, "
+                        "its numbers hold less than they seem to."
+                    ),
                     "A flagged shot is a finding about that shot's numbers, not about its cause.",
                 )
             ),
@@ -191,8 +255,18 @@ def provenance(close_out: CloseOut, results_sha256: str) -> Section:
     ]
     blocks: list[Block] = [Table("Versions and seed", (Column("What"), Column("Is", "wide")), tuple(facts))]
     if close_out.gathered.files:
-        blocks.append(Table("Files read", columns, tuple((file.path, file.sha256) for file in close_out.gathered.files)))
-    blocks.append(Statement("checksums.sha256 beside this report lists every file of the close-out; `reconcile verify` recomputes them.", "quiet"))
+        blocks.append(
+            Table("Files read", columns, tuple((file.path, file.sha256) for file in close_out.gathered.files))
+        )
+    blocks.append(
+        Statement(
+            (
+                "checksums.sha256 beside this report lists every file of the close-out; `reconcile verify` "
+                "recomputes them."
+            ),
+            "quiet",
+        )
+    )
     return Section("provenance", "Checksums, versions, seed", tuple(blocks))
 
 
@@ -206,4 +280,8 @@ def _version(name: str) -> str:
 def signatures() -> Section:
     """Return room for names and signatures."""
     words = Statement("Copy in full only. A change after signing makes a new report with a number of its own.", "quiet")
-    return Section("signatures", "Names and signatures", (Blanks(("Carried out by", "Checked by", "Approved by")), words, Statement("End of the report.", "quiet")))
+    return Section(
+        "signatures",
+        "Names and signatures",
+        (Blanks(("Carried out by", "Checked by", "Approved by")), words, Statement("End of the report.", "quiet")),
+    )

@@ -1,4 +1,4 @@
-"""results.xlsx: the close-out for people who go on in a spreadsheet. Typed cells, SI units, every digit; text stays text."""
+"""results.xlsx: the close-out for people who go on in a spreadsheet. Typed cells, SI units, 16 digits; text stays text."""
 
 from __future__ import annotations
 
@@ -17,7 +17,7 @@ from reconcile.report.machine import number, printable
 LONGEST_CELL = 32_000
 
 Cell = str | float | int | None
-Row = tuple[Sequence[Cell], bool]  # its cells, and whether it is set off as flagged
+Row = tuple[tuple[Cell, ...], bool]  # its cells, and whether it is set off as flagged
 
 _NOT_SOUND = ("misread", "stray", "set-aside")
 
@@ -26,9 +26,13 @@ def write_workbook(close_out: CloseOut, path: Path, now: datetime) -> None:
     """Write results.xlsx; `now` is the creation date that the file carries."""
     options = {"strings_to_formulas": False, "strings_to_urls": False, "strings_to_numbers": False}
     with xlsxwriter.Workbook(str(path), options) as book:
-        book.set_properties({"title": _cell_text(close_out.gathered.campaign.name), "created": now.replace(tzinfo=None)})
+        book.set_properties(
+            {"title": _cell_text(close_out.gathered.campaign.name), "created": now.replace(tzinfo=None)}
+        )
         formats = {
-            "head": book.add_format({"bold": True, "bg_color": "#E4E8EE", "bottom": 1, "text_wrap": True, "valign": "top"}),
+            "head": book.add_format(
+                {"bold": True, "bg_color": "#E4E8EE", "bottom": 1, "text_wrap": True, "valign": "top"}
+            ),
             "flag": book.add_format({"bg_color": "#FBE9DC"}),
         }
         for name, header, rows in _sheets(close_out):
@@ -41,12 +45,15 @@ def _sheets(close_out: CloseOut) -> Iterable[tuple[str, Sequence[str], list[Row]
     yield "shots", _SHOTS, _shots(close_out)
     yield "readings", _READINGS, _readings(close_out)
     yield "refused", ("source", "reason"), [((item.source, item.reason), False) for item in gathered.refused]
-    decisions = [
-        ((item.shot, item.sample, item.kind, item.source, item.decision, item.reason, item.by, item.on), False) for item in gathered.decisions
+    decisions: list[Row] = [
+        ((item.shot, item.sample, item.kind, item.source, item.decision, item.reason, item.by, item.on), False)
+        for item in gathered.decisions
     ]
     yield "decisions", ("shot", "sample", "kind", "source", "decision", "reason", "by", "on"), decisions
     yield "notes", ("source", "note"), [((note.source, note.note), False) for note in gathered.notes]
-    warned = [((item.where, item.what, item.value, item.limit, item.unit, item.advice), False) for item in close_out.warnings]
+    warned: list[Row] = [
+        ((item.where, item.what, item.value, item.limit, item.unit, item.advice), False) for item in close_out.warnings
+    ]
     yield "warnings", ("where", "what", "value", "limit", "unit", "advice"), warned
 
 

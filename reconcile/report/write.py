@@ -8,7 +8,7 @@ from collections.abc import Mapping
 from datetime import UTC, datetime
 from pathlib import Path
 
-from reconcile.campaign.files import write_checksums
+from reconcile.campaign.files import check_output, whole_folder, write_checksums
 from reconcile.campaign.readings import Gathered
 from reconcile.inference.outcome import CloseOut
 from reconcile.report import content, document, figures, machine, page, workbook
@@ -48,15 +48,23 @@ def write(close_out: CloseOut, folder: Path, *, now: datetime | None = None) -> 
 def write_gathered(gathered: Gathered, folder: Path) -> Path:
     """Write what was read and measured, before any fit: readings.csv with empty fit columns, refused.csv, overlays.
 
-    Returns the folder written.
+    Returns the folder written, whole: `folder`, or one beside it where that cannot be replaced.
+
+    Raises
+    ------
+    Refusal
+        `folder` lies in the campaign's, or holds what could be harmed.
+    OSError
+        A file cannot be written.
     """
-    folder.mkdir(parents=True, exist_ok=True)
-    machine.write_unfitted_readings(gathered.readings, folder / "readings.csv")
-    machine.write_refused(gathered.refused, folder / "refused.csv")
-    machine.write_input_checksums(gathered.files, folder / "inputs.sha256")
-    copy_overlays(gathered.overlays, folder)
-    write_checksums(folder)
-    return folder
+    check_output(folder, gathered.campaign.folder)
+    output = whole_folder(folder)
+    with output as staging:
+        machine.write_unfitted_readings(gathered.readings, staging / "readings.csv")
+        machine.write_refused(gathered.refused, staging / "refused.csv")
+        machine.write_input_checksums(gathered.files, staging / "inputs.sha256")
+        copy_overlays(gathered.overlays, staging)
+    return output.final or folder
 
 
 def copy_overlays(overlays: Mapping[str, Path], folder: Path) -> None:
