@@ -32,12 +32,12 @@ def test_the_hemisphere_carries_what_dissipation_leaves_of_the_shock_energy(exce
     carried = 2 * math.pi * r**2 / (998.2 * 1482.0) * quad(flux, 0.0, math.pi / 2, epsrel=1e-10)[0]
     pulse = sound.pressure_pulse(heated, r, 0.0, GOLD, WATER)
     left = float(sound.shock_energy(heated, GOLD, WATER) / (pulse.plane_stretch * pulse.spherical_stretch))
-    assert carried == pytest.approx(left, rel=1e-6)
+    assert carried == pytest.approx(left, abs=0, rel=1e-6)
 
 
-@pytest.mark.parametrize(("excess", "exponent"), [(0.3, -0.2), (1.5, 0.0), (4.5, -0.4)])
-def test_shock_energy_is_the_kinetic_energy_integrated_over_the_spot(excess, exponent):
-    # radius by radius instead of six points in the logarithm of the fluence
+@pytest.mark.parametrize(("excess", "exponent", "error"), [(0.3, -0.2, 1e-10), (1.5, 0.0, 1e-7), (4.5, -0.4, 1e-5)])
+def test_shock_energy_is_the_kinetic_energy_integrated_over_the_spot(excess, exponent, error):
+    # radius by radius instead of six points in the logarithm of the fluence, which tell on a wide range of it
     spot, heated = 25e-6, source(excess, 25e-6, exponent)
     edge = spot * math.sqrt(excess / 2)
 
@@ -48,7 +48,7 @@ def test_shock_energy_is_the_kinetic_energy_integrated_over_the_spot(excess, exp
         return 0.5 * 19300.0 * depth * velocity**2 * 2 * math.pi * radius
 
     expected = 0.5 * quad(ring, 0.0, edge, epsrel=1e-11)[0]
-    assert float(sound.shock_energy(heated, GOLD, WATER)) == pytest.approx(expected, rel=1e-7)
+    assert float(sound.shock_energy(heated, GOLD, WATER)) == pytest.approx(expected, abs=0, rel=error)
 
 
 def test_a_compact_source_sends_the_same_impulse_in_all_directions():
@@ -56,16 +56,16 @@ def test_a_compact_source_sends_the_same_impulse_in_all_directions():
     # Tagawa et al., J. Fluid Mech. 808, 5 (2016)
     pulses = [sound.pressure_pulse(source(), 5e-3, angle, GOLD, WATER) for angle in (0.0, 0.7, 1.4)]
     impulses = [float(pulse.pressure * pulse.duration) for pulse in pulses]
-    assert impulses == pytest.approx([impulses[0]] * 3, rel=1e-12)
+    assert impulses == pytest.approx([impulses[0]] * 3, abs=0, rel=1e-12)
 
 
 def test_a_liquid_without_nonlinearity_passes_sound_on_unchanged():
     linear = dataclasses.replace(WATER, nonlinearity=0.0)
     near, far = (sound.pressure_pulse(source(), r, 0.3, GOLD, linear) for r in (1e-3, 10e-3))
-    assert float(near.pressure / far.pressure) == pytest.approx(10.0, rel=1e-12)
-    assert float(near.duration) == pytest.approx(float(far.duration), rel=1e-12)
+    assert float(near.pressure / far.pressure) == pytest.approx(10.0, abs=0, rel=1e-12)
+    assert float(near.duration) == pytest.approx(float(far.duration), abs=0, rel=1e-12)
     assert float(far.advance) == pytest.approx(0.0, abs=1e-18)
-    assert float(far.arrival_time) == pytest.approx(10e-3 / 1482.0, rel=1e-12)
+    assert float(far.arrival_time) == pytest.approx(10e-3 / 1482.0, abs=0, rel=1e-12)
 
 
 def test_the_advance_is_the_way_gained_by_a_front_faster_than_sound():
@@ -86,8 +86,8 @@ def test_the_advance_is_the_way_gained_by_a_front_faster_than_sound():
     plane = quad(plane_gain, 0.0, run)[0]
     stretch, plane_duration = float(pulse.plane_stretch), duration * float(pulse.plane_stretch)
     spherical = c * plane_duration * (float(pulse.spherical_stretch) - 1)
-    assert float(pulse.advance) == pytest.approx(plane + spherical, rel=1e-9)
-    assert stretch == pytest.approx(math.sqrt(1 + beta * mach * run / (c * duration)), rel=1e-12)
+    assert float(pulse.advance) == pytest.approx(plane + spherical, abs=0, rel=1e-9)
+    assert stretch == pytest.approx(math.sqrt(1 + beta * mach * run / (c * duration)), abs=0, rel=1e-12)
 
 
 def one_pole(samples: np.ndarray, step: float, tau: float) -> np.ndarray:
@@ -105,8 +105,8 @@ def test_the_filter_that_judges_the_probe_meets_the_exponential_pulse(x, peak):
     time = np.arange(0.0, 60.0, step)
     seen = one_pole(np.exp(-time), step, x)
     assert seen.max() == pytest.approx(peak, abs=1e-4)  # printed digits, and a start between two samples
-    assert (seen**2).sum() * step / 0.5 == pytest.approx(1 / (1 + x), rel=3e-4)
-    assert seen.sum() * step == pytest.approx(1.0, rel=3e-4)
+    assert (seen**2).sum() * step / 0.5 == pytest.approx(1 / (1 + x), abs=0, rel=3e-4)
+    assert seen.sum() * step == pytest.approx(1.0, abs=0, rel=3e-4)
 
 
 @pytest.mark.parametrize("x", [0.02, 0.1, 0.45, 1.0, 1.9, 2.1, 5.0, 40.0])
@@ -119,8 +119,10 @@ def test_a_triangle_through_one_pole_is_what_the_filter_gives(x):
     seen = one_pole(np.clip(1.0 - time / duration, 0.0, None), step, tau)
     still = dataclasses.replace(WATER, sound_absorption=0.0)
     pulse = sound.Pulse(np.float64(1.0), np.float64(duration), np.zeros(()), np.zeros(()), np.ones(()), np.ones(()))
-    assert float(sound.recorded_peak(pulse, tau, 5e-3, still)) == pytest.approx(seen.max(), rel=5e-4)
-    assert float(sound.recorded_integral(pulse, tau, 5e-3, still)) == pytest.approx((seen**2).sum() * step, rel=5e-4)
+    assert float(sound.recorded_peak(pulse, tau, 5e-3, still)) == pytest.approx(seen.max(), abs=0, rel=5e-4)
+    assert float(sound.recorded_integral(pulse, tau, 5e-3, still)) == pytest.approx(
+        (seen**2).sum() * step, abs=0, rel=5e-4
+    )
 
 
 def test_the_probes_share_is_smooth_where_its_series_takes_over():
@@ -129,4 +131,6 @@ def test_the_probes_share_is_smooth_where_its_series_takes_over():
     share = sound._triangle_share(x)
     assert np.abs(np.diff(share, 2)).max() < 1e-13
     slow = sound._triangle_share(np.array([1e3, 1e6, 1e9]))
-    assert slow * np.array([1e3, 1e6, 1e9]) == pytest.approx(0.375, rel=1e-3)  # 3/8x: leading term of the expansion
+    assert slow * np.array([1e3, 1e6, 1e9]) == pytest.approx(
+        0.375, abs=0, rel=1e-3
+    )  # 3/8x: leading term of the expansion

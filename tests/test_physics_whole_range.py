@@ -107,7 +107,7 @@ def test_every_observable_is_finite_and_not_negative_for_all_that_the_priors_all
 
 def test_the_logarithm_of_the_recorded_integral_exists_far_below_threshold():
     draws = drawn(np.random.default_rng(5))
-    values = observables(draws, np.array([[1e-9], [1e-6], [1e-3]]))
+    values = observables(draws, np.array([[1e-20], [1e-6], [1e-3]]))
     assert np.isfinite(np.log(values["recorded integral"])).all()
 
 
@@ -125,4 +125,4 @@ def test_nothing_has_a_kink_at_the_threshold():
 
     coarse, fine = largest_bend(400), largest_bend(800)
     for name in coarse:
-        assert coarse[name] / fine[name] == pytest.approx(4.0, rel=0.05), name
+        assert coarse[name] / fine[name] == pytest.approx(4.0, abs=0, rel=0.05), name

@@ -71,7 +71,7 @@ def shock_energy(source: Source, metal: Metal, fluid: Fluid) -> Array:
     Notes
     -----
     `shock_factor` times the kinetic energy of the layer, integrated over the spot above threshold (six Gauss points
-    in the logarithm of the fluence). The layer has the solid's density and the heated depth.
+    in the logarithm of the fluence: 1e-5 at an excess of 4.5). The layer has the solid's density and the heated depth.
 
     """
     velocity, mean_share = _spot(source, metal, fluid)
