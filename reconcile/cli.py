@@ -150,6 +150,7 @@ def verb_closeout(args: argparse.Namespace) -> int:
 def verb_measure(args: argparse.Namespace) -> int:
     """Read and measure only; print what was read and what was refused."""
     _one_thread_each()
+    from reconcile.campaign.files import check_output
     from reconcile.campaign.manifest import load
     from reconcile.gather import gather
     from reconcile.report.summary import gathered_lines
@@ -158,6 +159,7 @@ def verb_measure(args: argparse.Namespace) -> int:
     with _Bars(args.quiet) as progress:
         campaign = load(args.campaign)
         folder = args.out or _measured_folder(campaign.name)
+        check_output(folder, campaign.folder)
         gathered = gather(campaign, workers=args.workers, progress=progress)
         written = write_gathered(gathered, folder)
     _say(*gathered_lines(gathered, written))
