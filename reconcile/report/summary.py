@@ -52,7 +52,7 @@ def _answers(close_out: CloseOut) -> list[str]:
 
 
 def _shots(close_out: CloseOut) -> list[str]:
-    counted = Counter(shot.verdict for shot in close_out.shots)
+    counted: Counter[str] = Counter(shot.verdict for shot in close_out.shots)
     words = {
         "kept": "kept",
         "misread": "with a misread energy",
