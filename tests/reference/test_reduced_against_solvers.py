@@ -44,7 +44,7 @@ def test_growth_time_in_water():
     over = PRESSURE - WATER.vapour_pressure
     for radius, _, gas in bubbles(25):
         moved = motion(radius, liquid_of(WATER), gas)
-        closed = bubble.growth_time(moved.collapse_time, radius, over, WATER.surface_tension, gas)
+        closed = bubble.growth_time(moved.collapse_time, radius, over, WATER, gas)
         assert closed == pytest.approx(moved.growth_time, rel=1.0e-3)
 
 
