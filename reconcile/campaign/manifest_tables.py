@@ -125,7 +125,7 @@ def _shared(section: Section, kind: str, known: dict[str, str | None]) -> dict[s
     """Return what every table may say, as arguments of Table."""
     columns = section.words("columns", "a column's header")
     units = section.words("units", "a unit")
-    if kind not in FILE_KINDS or kind == "probe-trace":
+    if known:
         for part, given in (("columns", columns), ("units", units)):
             _refuse_unknown_words(section, part, given, list(known))
     for name, unit in units.items():
@@ -320,7 +320,7 @@ def _sharing(tables: list[Table]) -> tuple[Table, ...]:
     for table in tables:
         scale = shared.get((table.name, "scale"))
         pitch = shared.get((table.name, "pixel_pitch"))
-        pictures = table.kind in {"crater-map", "shadowgraph", "micrograph"}
+        pictures = "pixel_pitch" in FILE_KINDS.get(table.kind, ())
         done.append(
             replace(
                 table,
@@ -328,12 +328,8 @@ def _sharing(tables: list[Table]) -> tuple[Table, ...]:
                 pixel_pitch=pitch[0] if pitch and pictures and "graticule" not in table.options else None,
             )
         )
-        if (
-            pictures
-            and done[-1].pixel_pitch is None
-            and "graticule" not in table.options
-            and table.kind != "crater-map"
-        ):
+        needs_pitch = "graticule" in FILE_KINDS.get(table.kind, ()) and "graticule" not in table.options
+        if needs_pitch and done[-1].pixel_pitch is None:
             raise Refusal(
                 table.place,
                 found=f"neither pixel_pitch nor graticule for {table.kind}",

@@ -40,7 +40,7 @@ def decimal_evidence(text: str) -> str | None:
     None
         The number reads the same either way, or is no number.
     """
-    match = _SHAPE.fullmatch(plain(text).lstrip("<≤ "))
+    match = _SHAPE.fullmatch(plain(text).lstrip("<≤= "))
     if match is None:
         return None
     digits, power = match.group(2), match.group(3)

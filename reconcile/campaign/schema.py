@@ -133,6 +133,7 @@ SIZE_COLUMNS: dict[str, dict[str, str | None]] = {
     "size-counts": {"sample": None, "lower": "m", "upper": "m", "count": "1"},
     "particle-list": {"sample": None, "value": "m"},
 }
+FILE_COLUMNS: dict[str, dict[str, str | None]] = {"probe-trace": {"time": "s", "voltage": "V"}}
 EDGES = ("bottom", "top", "left", "right")
 
 
@@ -146,7 +147,7 @@ def table_columns(kind: str) -> dict[str, str | None]:
         entry = KINDS[kind]
         delay: dict[str, str | None] = {"delay": "s"} if entry.has_delay else {}
         return {entry.target: None, **delay, "value": entry.unit, "uncertainty": entry.unit}
-    return {"time": "s", "voltage": "V"} if kind == "probe-trace" else {}
+    return FILE_COLUMNS.get(kind, {})
 
 
 def table_keys(kind: str) -> tuple[str, ...]:

@@ -7,7 +7,7 @@ from reconcile.campaign.kinds import KINDS
 from reconcile.campaign.patterns import matching, unasked
 from reconcile.campaign.progress import Progress, silent
 from reconcile.campaign.readings import Gathered, Reading
-from reconcile.campaign.refusal import Refusal
+from reconcile.campaign.refusal import Place, Refusal
 from reconcile.campaign.schema import FILE_KINDS, table_columns
 from reconcile.gather.collected import Collected, Names, same_source, spreadsheets
 from reconcile.gather.decisions import decided, read_decisions
@@ -44,6 +44,11 @@ def gather(campaign: Campaign, *, workers: int = 1, progress: Progress | None = 
     log = read_log(campaign, collected)
     known = Known(log, Names([*log.shots, *log.lost], "shot"), Names([*log.samples, *log.lost_samples], "sample"))
     _refuse_overlaps(campaign)
+    if campaign.probe is not None and campaign.probe.sensitivity_file is not None:
+        file = campaign.probe.sensitivity_file["file"]
+        collected.asked.update(
+            spreadsheets(campaign, file, Place(campaign.log.place.file, key="probe.sensitivity_file"))
+        )
     readings: list[Reading] = []
     for number, table in enumerate(campaign.tables):
         progress("reading", number, len(campaign.tables))

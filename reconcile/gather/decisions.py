@@ -14,7 +14,7 @@ from reconcile.gather.log import Log
 from reconcile.gather.values import Known
 from reconcile.read.cells import Row, Sheet
 from reconcile.read.delimited import read_delimited
-from reconcile.read.tables import folded
+from reconcile.read.headers import folded
 
 FILE = "decisions.csv"
 DECISIONS = ("set-aside", "keep", "undecided")

@@ -10,7 +10,8 @@ from reconcile.campaign.refusal import Place, Refusal
 from reconcile.campaign.schema import LOG_COLUMNS
 from reconcile.gather.collected import Collected, spreadsheets
 from reconcile.read.cells import Cell
-from reconcile.read.tables import Column, SheetRead, TableRow, in_si, name_in, number, read_table
+from reconcile.read.headers import Column
+from reconcile.read.tables import SheetRead, TableRow, in_si, name_in, number, read_table
 
 # Columns that hold whole numbers from 1, and the ranges of the others [SI].
 _COUNTS = ("pulses", "sites")

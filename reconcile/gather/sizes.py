@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass, field
 
 from reconcile.campaign.campaign import Table
@@ -33,7 +34,7 @@ class SizeTable:
 
     def read(self, sheet: SheetRead) -> None:
         """Take in the rows of one sheet."""
-        counted = self.table.kind == "size-counts"
+        counted = "count" in sheet.columns
         key = "count" if counted else "value"
         for row in sheet.rows:
             if key not in row.cells:
@@ -76,7 +77,7 @@ class SizeTable:
 
     def _numbers(self, row: TableRow, sheet: SheetRead) -> tuple[float, ...] | None:
         check_whole(row)
-        if self.table.kind == "particle-list":
+        if "count" not in sheet.columns:
             cell = row.cells["value"]
             value = number(cell, sheet.columns["value"])
             diameter = None if value is None else in_si(value, sheet.columns["value"])
@@ -134,7 +135,7 @@ def _measure(kind: str, numbers: list[tuple[float, ...]]) -> Sizes:
     """Measure one sample; raises ValueError with a sentence where that cannot be done."""
     if not numbers:
         raise ValueError("there is no particle.")
-    if kind == "particle-list":
-        return from_diameters([diameter for (diameter,) in numbers])
-    lower, upper, count = zip(*numbers, strict=True)
-    return from_counts(lower, upper, count)
+    return _MEASURED[kind](*(list(column) for column in zip(*numbers, strict=True)))
+
+
+_MEASURED: dict[str, Callable[..., Sizes]] = {"size-counts": from_counts, "particle-list": from_diameters}

@@ -14,7 +14,8 @@ from reconcile.campaign.refusal import Place, Refusal
 from reconcile.gather.collected import Collected, Names
 from reconcile.gather.log import Log
 from reconcile.read.cells import Cell
-from reconcile.read.tables import Column, SheetRead, TableRow, in_si, name_in, number
+from reconcile.read.headers import Column
+from reconcile.read.tables import SheetRead, TableRow, in_si, name_in, number
 
 _NOT_DETECTED = ("n.d.", "nd", "n.d")
 _NEGATIVE = 3.0  # a number further below 0 than this many of its uncertainties is no noise, but a sign or a slip
@@ -193,6 +194,17 @@ def _uncertainty(value: float, row: TableRow, sheet: SheetRead, table: Table, ce
 _Rule = tuple[Callable[[float, float], bool], str]
 
 
+# What a number of these kinds may be, given how far noise reaches below 0; of all others see `_rule`.
+_RULES: dict[str, _Rule] = {
+    "arrival-time": (lambda value, noise: True, "a time"),
+    "reflected-fraction": (
+        lambda value, noise: -noise <= value <= 1 + noise,
+        "a share from 0 to 1 (or in %, with % in the header)",
+    ),
+    "geometric-sd": (lambda value, noise: value >= 1, "a factor of 1 or more"),
+}
+
+
 def _check_value(kind: Kind, value: float, u: float, table: Table, cell: Cell) -> None:
     """Refuse a number that such a reading cannot be."""
     limit = table.detection_limit.value if table.detection_limit is not None else 0.0
@@ -207,14 +219,8 @@ def _check_value(kind: Kind, value: float, u: float, table: Table, cell: Cell) -
 
 
 def _rule(kind: Kind) -> _Rule:
-    if kind.name == "arrival-time":
-        return (lambda value, noise: True), "a time"
-    if kind.name == "reflected-fraction":
-        return (
-            lambda value, noise: -noise <= value <= 1 + noise
-        ), "a share from 0 to 1 (or in %, with % in the header)"
-    if kind.name == "geometric-sd":
-        return (lambda value, noise: value >= 1), "a factor of 1 or more"
+    if kind.name in _RULES:
+        return _RULES[kind.name]
     if kind.logarithmic:
         return (lambda value, noise: value > 0), "a number above 0"
     return (lambda value, noise: value > -noise), "a number above 0 but for its uncertainty"

@@ -67,5 +67,6 @@ class Sheet:
     place: Place  # of the sheet
     rows: tuple[Row, ...]
     merged: tuple[Merged, ...] = ()
-    delimited: bool = False  # of a text file: a row longer than its header is torn
+    delimited: bool = False  # of a text file, whose cells have their line as place
+    commas: bool = False  # commas between its cells: an unquoted decimal comma tears a row
     notes: tuple[Note, ...] = field(default=())

@@ -144,4 +144,4 @@ def _split(text: str, name: str, delimiter: str, notes: tuple[Note, ...]) -> She
         cells = {column: Cell(place, field.strip()) for column, field in enumerate(fields, start=1) if field.strip()}
         rows.append(Row(start, cells))
         start = reader.line_num + 1
-    return Sheet(Place(name), tuple(rows), delimited=True, notes=notes)
+    return Sheet(Place(name), tuple(rows), delimited=True, commas=delimiter == ",", notes=notes)
