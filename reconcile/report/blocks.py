@@ -46,6 +46,7 @@ class Table:
     columns: tuple[Column, ...]
     rows: tuple[tuple[str, ...], ...]
     flagged: frozenset[int] = frozenset()  # rows to set off, by position
+    prominent: bool = False  # set larger: an answer, not a record
 
 
 @dataclass(frozen=True, slots=True)
@@ -121,6 +122,7 @@ def _block(block: Block) -> dict[str, Any]:
             return {
                 "type": "table",
                 "caption": plain(block.caption),
+                "prominent": block.prominent,
                 "columns": [{"title": plain(column.title), "kind": column.kind} for column in block.columns],
                 "rows": [
                     {"cells": [plain(cell) for cell in row], "flagged": i in block.flagged}

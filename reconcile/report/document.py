@@ -37,6 +37,8 @@ def write_document(report: Report, figures: Path, path: Path, now: datetime) -> 
     Characters of which neither typeface has a glyph are drawn as □, and the document says so.
     """
     data = as_data(report)
+    # What the file says of itself is not laid out: no places to break.
+    about = {"title": _drawable(data["title"]), "number": _drawable(data["number"])}
     missing = False
 
     def fitted(text: str) -> str:
@@ -46,6 +48,7 @@ def write_document(report: Report, figures: Path, path: Path, now: datetime) -> 
         return _breakable(kept)
 
     data = _mapped(data, fitted)
+    data["about"] = about
     data["missing_glyphs"] = missing
     data["date"] = {"year": now.year, "month": now.month, "day": now.day}
     with tempfile.TemporaryDirectory(prefix="report-") as name:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 import warnings
 from collections.abc import Iterable, Sequence
 from pathlib import Path
@@ -20,6 +21,7 @@ from reconcile.report.lines import count, scale_of
 from reconcile.report.style import BLACK, BLUE, GREY, MANY_MARKS, STYLE, VERMILION, marks, readable_ticks, save
 
 MOST_CORNERS = 6
+MOST_BARS = 30
 # An input counts as informed here where its variance fell by at least a tenth.
 LEAST_INFORMED = 0.1
 
@@ -90,12 +92,14 @@ def _informed(close_out: CloseOut) -> list[InputResult]:
         and not result.entry.derived
         and result.informed is not None
         and result.informed >= LEAST_INFORMED
+        and 0 < result.prior_sd < math.inf
     ]
     return sorted(found, key=lambda result: -(result.informed or 0))
 
 
 def _prior_to_posterior(informed: Sequence[InputResult], folder: Path) -> Iterable[Drawing]:
     """Draw prior and posterior of each informed input on one axis, in prior standard deviations from the prior mean."""
+    informed = informed[:MOST_BARS]
     if not informed:
         return
     figure = Figure(figsize=(6.6, 0.9 + 0.3 * len(informed)), layout="constrained")

@@ -74,7 +74,7 @@ def _answer(close_out: CloseOut) -> Iterable[Block]:
         any_skewed = any_skewed or skewed(summary)
         rows.append((words, estimate(summary, scale), interval(summary, scale), scale.label or "1"))
     columns = (Column("Quantity", "wide"), Column("Value", "number"), Column("95 % interval", "number"), Column("Unit"))
-    yield Table("The answer", columns, tuple(rows))
+    yield Table("The answer", columns, tuple(rows), prominent=True)
     skewed_words = (
         " Where the distribution is skewed, its median with the 68 % interval in brackets." if any_skewed else ""
     )

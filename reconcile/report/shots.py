@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Iterable, Sequence
+from collections.abc import Iterable, Mapping, Sequence
 
 from reconcile.campaign.kinds import KINDS
 from reconcile.inference.outcome import CloseOut, ReadingResult, ShotResult
@@ -22,26 +22,46 @@ def flagged_shots(close_out: CloseOut) -> Section:
             readings.setdefault(result.reading.shot, []).append(result)
     blocks: list[Block] = []
     for shot in close_out.shots:
-        if shot.verdict != "kept" or shot.shot.kept is not None:
+        if shot.verdict in ("misread", "stray") or shot.shot.kept is not None:
             blocks += _flagged_shot(shot, readings.get(shot.shot.name, []))
+    aside = [shot for shot in close_out.shots if shot.verdict == "set-aside"]
+    if aside:
+        blocks += _set_aside(aside, {name: len(found) for name, found in readings.items()})
     if not blocks:
-        return Section(
-            "flagged-shots",
-            "Flagged shots",
-            (Statement("None: every shot was kept, and nobody had to vouch for one."),),
-        )
+        none = Statement("None: every shot was kept, and nobody had to vouch for one.")
+        return Section("flagged-shots", "Flagged shots", (none,))
     caution = Statement(
-        "An energy ratio far from 1 says that the readings of a shot show another energy than was logged. "
-        "Lost delivery (dirt, a left-over "
-        "bubble, a clipped beam) cannot be told from a misread meter."
+        "An energy ratio far from 1 says that the readings of a shot show another energy than was logged. Lost "
+        "delivery (dirt, a left-over bubble, a clipped beam) cannot be told from a misread meter."
     )
     return Section("flagged-shots", "Flagged shots", (caution, *blocks))
+
+
+def _set_aside(aside: Sequence[ShotResult], readings: Mapping[str, int]) -> Iterable[Block]:
+    energy = scale_for("J", [result.shot.metered_energy for result in aside])
+    columns = (
+        Column("Shot"),
+        Column(energy.heading("Logged"), "number"),
+        Column("Readings", "number"),
+        Column("Why", "wide"),
+        Column("In the log", "text"),
+    )
+    rows = []
+    for result in aside:
+        shot = result.shot
+        reasons = list(result.reasons)
+        if shot.set_aside is not None and not any(shot.set_aside in reason for reason in reasons):
+            reasons.insert(0, shot.set_aside)
+        logged = alone(shot.metered_energy, energy)
+        rows.append((shot.name, logged, str(readings.get(shot.name, 0)), "; ".join(reasons), str(shot.place)))
+    yield Heading("Set aside by a person")
+    yield Statement("These shots and their readings are not in the fit; their fluences follow from the log alone.")
+    yield Table("Shots set aside", columns, tuple(rows))
 
 
 _SHOT_WORDS = {
     "misread": "misread energy",
     "stray": "a stray reading",
-    "set-aside": "set aside by a person",
     "kept": "kept on a person's word",
 }
 
@@ -56,10 +76,6 @@ def _flagged_shot(result: ShotResult, readings: Sequence[ReadingResult]) -> Iter
         f"probability of a misread energy {probability(result.p_misread)}."
     )
     reasons = list(result.reasons)
-    if shot.set_aside is not None and not any(shot.set_aside in reason for reason in reasons):
-        reasons.append(f"Set aside: {shot.set_aside}.")
-    if result.verdict == "set-aside":
-        reasons.append("Its fluence follows from the log alone.")
     if shot.kept is not None and not any(shot.kept in reason for reason in reasons):
         reasons.append(f"Kept on a person's word: {shot.kept}.")
     if reasons:
