@@ -9,8 +9,8 @@ from collections.abc import Iterable
 DASHES = frozenset("-–—−‐‑‒―")
 MINUS = str.maketrans(dict.fromkeys("−–‐‑‒﹣－", "-"))
 _GROUP_BLANKS = "\u00a0\u2009\u202f\u2007' ’"
-_POWER = r"(?:[eE][+-]?\d+|[ ]*[×x*·⋅][ ]*10\^?[+-]?\d+)?"
-_SHAPE = re.compile(rf"([+-]?)((?:\d[\d.,{_GROUP_BLANKS}]*)?(?:[.,]?\d+)?[.,]?)({_POWER})")
+_POWER = r"(?:[eE][+-]?[0-9]+|[ ]*[×x*·⋅][ ]*10\^?[+-]?[0-9]+)?"
+_SHAPE = re.compile(rf"([+-]?)((?:[0-9][0-9.,{_GROUP_BLANKS}]*)?(?:[.,]?[0-9]+)?[.,]?)({_POWER})")
 _SUPERSCRIPTS = str.maketrans("⁰¹²³⁴⁵⁶⁷⁸⁹⁺⁻", "0123456789+-")
 _SUPERSCRIPT_RUN = re.compile("[⁺⁻]?[⁰¹²³⁴⁵⁶⁷⁸⁹]+")
 
@@ -108,9 +108,9 @@ def to_float(text: str, decimal: str = ".") -> float:
     whole, mark, fraction = digits.partition(decimal)
     grouping = "," if decimal == "." else "."
     grouped = re.search(f"[{_GROUP_BLANKS}{grouping}]", whole)
-    if grouped and not re.fullmatch(rf"\d{{1,3}}(?:{re.escape(grouped.group())}\d{{3}})+", whole):
+    if grouped and not re.fullmatch(rf"[0-9]{{1,3}}(?:{re.escape(grouped.group())}[0-9]{{3}})+", whole):
         raise ValueError(text)
-    if fraction and not fraction.isascii() or re.search(r"\D", fraction):
+    if re.search("[^0-9]", fraction):
         raise ValueError(text)
     exponent = re.sub(r"^(?:[eE]|[ ]*[×x*·⋅][ ]*10\^?)", "", power) or "0"
     number = float(f"{sign}{re.sub(r'[^0-9]', '', whole) or '0'}{'.' if mark else ''}{fraction}e{exponent}")

@@ -223,11 +223,9 @@ def parse_quantity(text: str | float, unit: str, place: Place | str) -> Quantity
         if unit != "1" or isinstance(text, bool) or not math.isfinite(text):
             raise Refusal(
                 place,
-                found=f"{str(text).lower() if isinstance(text, bool) else shown_text} without a unit"
-                if unit != "1"
-                else shown_text,
-                expected=f'a quantity with its unit, such as "{_example(unit)}"',
-                remedy="Write it in quotes, with its unit.",
+                found=f"{shown_text.lower()} without a unit" if unit != "1" else shown_text.lower(),
+                expected=f'a quantity such as "{_example(unit)}"',
+                remedy="Write the number and its unit in quotes." if unit != "1" else "Write a number.",
             )
         return Quantity(float(text), None, "1", shown_text)
     body, k = _coverage(text, place)
@@ -281,7 +279,9 @@ def _halves(body: str, text: str, place: Place | str) -> tuple[str, str | None]:
 
 def _number_and_unit(part: str, text: str, unit: str, place: Place | str) -> tuple[float, Unit | None]:
     part = plain(part)
-    match = re.match(r"[+-]?(?:\d[\d ]*)?[.,]?\d*(?:[.,]\d+)*(?:[eE][+-]?\d+|\s*[×x*·⋅]\s*10\^?[+-]?\d+)?", part)
+    match = re.match(
+        r"[+-]?(?:\d[\d ]*)?[.,]?\d*(?:[.,]\d+)*(?:[eE][+-]?\d+|\s*[×x*·⋅]\s*10\^?[+-]?\d+)?", part, re.ASCII
+    )
     number_text = match.group().strip() if match else ""
     try:
         number = to_float(number_text)
