@@ -19,7 +19,17 @@ from reconcile.campaign.inputs import describe
 from reconcile.campaign.kinds import KINDS
 from reconcile.campaign.readings import FileRead, Reading
 from reconcile.campaign.refusal import Refused
-from reconcile.inference.outcome import CloseOut, InputResult, Posterior, ReadingResult, Summary
+from reconcile.inference.outcome import (
+    CloseOut,
+    InputResult,
+    KindResult,
+    Posterior,
+    ReadingResult,
+    Sampling,
+    ShotResult,
+    Summary,
+    Warned,
+)
 
 CONTRACT = 1
 
@@ -52,11 +62,11 @@ def number(value: float | None) -> float | None:
 def results(close_out: CloseOut) -> dict[str, Any]:
     """Return the whole of results.json as plain lists, dictionaries, text, numbers and None."""
     names, matrix = close_out.correlation
-    sampling = close_out.sampling
+    gathered = close_out.gathered
     return {
         "contract": CONTRACT,
         "software": {"name": "reconcile", "version": __version__},
-        "campaign": close_out.gathered.campaign.name,
+        "campaign": gathered.campaign.name,
         "status": close_out.status,
         "status_reasons": list(close_out.status_reasons),
         "seed": int(close_out.seed),
@@ -66,56 +76,58 @@ def results(close_out: CloseOut) -> dict[str, Any]:
             name: [{"source": part.source, "share": number(part.share)} for part in parts]
             for name, parts in close_out.budget.items()
         },
-        "shots": [
-            {
-                "shot": result.shot.name,
-                "metered_energy": number(result.shot.metered_energy),
-                "pulses": int(result.shot.pulses),
-                "absorbed_fluence": _summary(result.absorbed_fluence),
-                "incident_fluence": _summary(result.incident_fluence),
-                "energy_ratio": {"mean": number(result.energy_ratio), "sd": number(result.energy_ratio_sd)},
-                "p_misread": number(result.p_misread),
-                "verdict": result.verdict,
-                "reasons": list(result.reasons),
-            }
-            for result in close_out.shots
-        ],
+        "shots": [_shot(result) for result in close_out.shots],
         "readings": [_reading(result) for result in close_out.readings],
-        "refused": [{"source": refused.source, "reason": refused.reason} for refused in close_out.gathered.refused],
-        "notes": [{"source": note.source, "note": note.note} for note in close_out.gathered.notes],
-        "kinds": {
-            result.kind: {
-                "n": int(result.n),
-                "p_value": number(result.p_value),
-                "agrees": None if result.agrees is None else bool(result.agrees),
-            }
-            for result in close_out.kinds
-        },
-        "strained": [
-            {"input": strained.input, "prior_tail": number(strained.prior_tail)} for strained in close_out.strained
-        ],
-        "warnings": [
-            {
-                "where": warned.where,
-                "what": warned.what,
-                "value": number(warned.value),
-                "limit": number(warned.limit),
-                "unit": warned.unit,
-                "advice": warned.advice,
-            }
-            for warned in close_out.warnings
-        ],
+        "refused": [{"source": refused.source, "reason": refused.reason} for refused in gathered.refused],
+        "notes": [{"source": note.source, "note": note.note} for note in gathered.notes],
+        "kinds": {result.kind: _kind(result) for result in close_out.kinds},
+        "strained": [{"input": item.input, "prior_tail": number(item.prior_tail)} for item in close_out.strained],
+        "warnings": [_warning(item) for item in close_out.warnings],
         "could_not_tell": list(close_out.could_not_tell),
-        "sampling": {
-            "min_ess": number(sampling.min_ess),
-            "max_rhat": number(sampling.max_rhat),
-            "draws": int(sampling.draws),
-            "seconds": number(sampling.seconds),
-            "converged": bool(sampling.converged),
-            "target_ess": int(sampling.target_ess),
-            "integral_error": number(sampling.integral_error),
-            "evaluations": int(sampling.evaluations),
-        },
+        "sampling": _sampling(close_out.sampling),
+    }
+
+
+def _shot(result: ShotResult) -> dict[str, Any]:
+    return {
+        "shot": result.shot.name,
+        "metered_energy": number(result.shot.metered_energy),
+        "pulses": int(result.shot.pulses),
+        "absorbed_fluence": _summary(result.absorbed_fluence),
+        "incident_fluence": _summary(result.incident_fluence),
+        "energy_ratio": {"mean": number(result.energy_ratio), "sd": number(result.energy_ratio_sd)},
+        "p_misread": number(result.p_misread),
+        "verdict": result.verdict,
+        "reasons": list(result.reasons),
+    }
+
+
+def _kind(result: KindResult) -> dict[str, Any]:
+    agrees = None if result.agrees is None else bool(result.agrees)
+    return {"n": int(result.n), "p_value": number(result.p_value), "agrees": agrees}
+
+
+def _warning(item: Warned) -> dict[str, Any]:
+    return {
+        "where": item.where,
+        "what": item.what,
+        "value": number(item.value),
+        "limit": number(item.limit),
+        "unit": item.unit,
+        "advice": item.advice,
+    }
+
+
+def _sampling(sampling: Sampling) -> dict[str, Any]:
+    return {
+        "min_ess": number(sampling.min_ess),
+        "max_rhat": number(sampling.max_rhat),
+        "draws": int(sampling.draws),
+        "seconds": number(sampling.seconds),
+        "converged": bool(sampling.converged),
+        "target_ess": int(sampling.target_ess),
+        "integral_error": number(sampling.integral_error),
+        "evaluations": int(sampling.evaluations),
     }
 
 
