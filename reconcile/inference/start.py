@@ -1,0 +1,216 @@
+"""Where sampling starts: a robust fit to the readings, the posterior's mode, its shape there, the lattice that holds it."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+
+import numpy as np
+from scipy import optimize, special
+
+from reconcile.campaign.kinds import KINDS
+from reconcile.inference.coordinates import Inputs
+from reconcile.inference.lattice import STEP, Lattice, full_points, kept_points
+from reconcile.inference.model import EXPECTED, RELATIVE_SCATTER, TINY, Array, Expected, reading_factor, reading_offset
+from reconcile.inference.problem import Data, Problem
+
+# How far a start may lie from the mode of the prior, in its standard deviations, when a start is perturbed.
+_PERTURBED = 0.7
+_PERTURBED_STARTS = 3
+_IMPOSSIBLE = 1e9  # stands for minus the log of zero, so that a search turns back
+_FLOOR, _NEIGHBOURS = 1e-7, 4  # share of a shot's peak below which a lattice point is dropped
+_PROBES = 16  # draws that decide which lattice points matter
+_MOST_PASSES, _WHITE_ENOUGH = 8, 0.3  # of the curvature, and the departure from the identity at which it stops
+
+
+@dataclass(frozen=True, slots=True)
+class Start:
+    """The mode, a normal approximation around it, and the problem on the lattice that it needs."""
+
+    problem: Problem
+    mode: Array  # (k,)
+    covariance: Array  # (k, k)
+    log_prob: float  # at the mode
+    others: tuple[tuple[float, Array], ...]  # log_prob and mode of starts that ended elsewhere
+
+
+def find_start(data: Data, rng: np.random.Generator) -> Start:
+    """Find the mode of a campaign's posterior from its readings.
+
+    Several starts are tried; one that ends lower by much is forgotten, one that ends nearby but elsewhere is kept.
+    """
+    rough = Problem(data)
+    begin = _prior_median(rough)
+    spread = _prior_spread(rough, rng)
+    fits = [_robust_fit(rough, begin, spread)]
+    for _ in range(_PERTURBED_STARTS):
+        shifted = begin + _PERTURBED * spread * rng.standard_normal(len(begin))
+        if np.isfinite(rough.log_prior(shifted[None])[0][0]):
+            fits.append(_robust_fit(rough, shifted, spread))
+    fits.sort(key=lambda fit: fit.cost)
+    # The robust fit knows the place better than the shape: its lattice holds that place, the next one the shape as well.
+    problem = _on_lattice_of(data, np.stack([fit.position for fit in fits[:2]]), 0.2 * fits[0].root, rng)
+    peaks = sorted((climb(problem.log_prob, fit.position, fit.root) for fit in fits[:2]), key=lambda peak: -peak.log_prob)
+    best = peaks[0]
+    covariance = curvature(problem.log_prob, best.position, best.covariance)
+    for _ in range(2):
+        problem = _on_lattice_of(data, best.position[None], np.linalg.cholesky(covariance), rng)
+        best = climb(problem.log_prob, best.position, np.linalg.cholesky(covariance))
+        covariance = curvature(problem.log_prob, best.position, covariance)
+    white = np.linalg.inv(np.linalg.cholesky(covariance))
+    others = tuple(
+        (peak.log_prob, peak.position)
+        for peak in peaks[1:]
+        if best.log_prob - peak.log_prob < 12.0 and np.abs(white @ (peak.position - best.position)).max() > 1.0
+    )
+    return Start(problem, best.position, covariance, best.log_prob, others)
+
+
+@dataclass(frozen=True, slots=True)
+class _Fit:
+    """A robust least-squares fit: cost, place, and a root of its covariance."""
+
+    cost: float
+    position: Array
+    root: Array
+
+
+def _prior_median(problem: Problem) -> Array:
+    believed = problem.data.believed
+    medians = {name: believed[name].density.quantile(np.array([0.5])) for name in problem.names}
+    return problem.coordinates.position(medians)[0]
+
+
+def _prior_spread(problem: Problem, rng: np.random.Generator) -> Array:
+    """Standard deviation of each coordinate under the priors, (k,)."""
+    believed = problem.data.believed
+    draws = {name: believed[name].density.sample(rng, 400) for name in problem.names}
+    return problem.coordinates.position(draws).std(axis=0)
+
+
+def _robust_fit(problem: Problem, begin: Array, spread: Array) -> _Fit:
+    """Fit all readings at their logged energies, bad ones held back, the priors as further residuals."""
+    residuals = _residuals(problem)
+
+    def one(step: Array) -> Array:
+        return residuals((begin + spread * step)[None])[:, 0]
+
+    def jacobian(step: Array) -> Array:
+        nudge = 1e-4 * np.eye(len(step))
+        moved = residuals(begin + spread * np.concatenate([step + nudge, step - nudge]))
+        return (moved[:, : len(step)] - moved[:, len(step) :]) / 2e-4
+
+    found = optimize.least_squares(one, np.zeros(len(begin)), jac=jacobian, x_scale=1.0, max_nfev=60)
+    information = found.jac.T @ found.jac + 1e-4 * np.eye(len(begin))
+    root = spread[:, None] * np.linalg.cholesky(np.linalg.inv(information))
+    return _Fit(float(found.cost), begin + spread * found.x, root)
+
+
+def _residuals(problem: Problem) -> Callable[[Array], Array]:
+    """Residuals (readings + inputs, draws) at coordinates (draws, k): robust ones, and normal scores of the priors."""
+    data, believed = problem.data, problem.data.believed
+
+    def of(position: Array) -> Array:
+        inputs, _ = problem.coordinates.inputs(position)
+        scores = [special.ndtri(np.clip(believed[n].density.cdf(inputs[n]), 1e-12, 1 - 1e-12)) for n in problem.names]
+        rows = [np.broadcast_to(score, (len(position),))[None] for score in scores]
+        rows += _reading_residuals(data, inputs)
+        stacked = np.concatenate([np.broadcast_to(row, (len(row), len(position))) for row in rows])
+        return np.nan_to_num(stacked, nan=1e3, posinf=1e3, neginf=-1e3)
+
+    return of
+
+
+def _reading_residuals(data: Data, inputs: Inputs) -> list[Array]:
+    """Residuals of each slot at the logged energies, bent so that a bad reading pulls like a logarithm."""
+    likelihood, parts = data.likelihood, []
+    for slot in likelihood.slots:
+        if slot.censored:
+            continue
+        state = Expected(data.conditions, inputs, data.table.exposures(slot.target, 0.0))
+        if slot.delay is None:
+            expected = EXPECTED[slot.kind](state)
+        else:
+            expected = state.radius_during(slot.delay[:, None], state.motion)
+        scatter = inputs[f"scatter.{slot.kind}"]
+        reach = expected if slot.kind in RELATIVE_SCATTER else 1.0
+        for repeat in range(len(slot.rows)):
+            table = data.likelihood.tables[slot.table[repeat, 0]]
+            factor = reading_factor(slot.kind, table, data.conditions, inputs)
+            seen = expected * factor + reading_offset(slot.kind, data.conditions, inputs)
+            value, u = slot.value[repeat][:, None], slot.u[repeat][:, None]
+            logarithmic = KINDS[slot.kind].logarithmic
+            miss = value - (np.log(np.maximum(seen, TINY)) if logarithmic else seen)
+            follows = logarithmic or slot.kind in RELATIVE_SCATTER  # an arrival hardly moves with the energy
+            jitter = 2.0 * inputs["energy_jitter"] * (1.0 if logarithmic else np.abs(reach)) if follows else 0.0
+            ratio = miss / np.sqrt(u**2 + (scatter * reach) ** 2 + jitter**2)
+            parts.append(np.sign(ratio) * np.sqrt(2.0 * np.log1p(0.5 * ratio**2)))
+    return parts
+
+
+def _on_lattice_of(data: Data, centres: Array, root: Array, rng: np.random.Generator) -> Problem:
+    """Put the problem on the lattice points that matter to draws around some places."""
+    shots = data.likelihood.read_shots
+    if not len(shots):
+        return Problem(data)
+    full = Lattice.of(data.table, full_points(data.table, shots, STEP), STEP)
+    problem = Problem(data, full)
+    scattered = centres[rng.integers(len(centres), size=4 * _PROBES)]
+    scattered = scattered + rng.standard_normal(scattered.shape) @ root.T
+    usable = scattered[np.isfinite(problem.log_prior(scattered)[0])][: _PROBES - len(centres)]
+    probes = np.concatenate([centres, usable])
+    weights = problem.over_draws(probes, problem.likelihood.integrand)
+    return problem.on(Lattice.of(data.table, kept_points(full, weights, _FLOOR, _NEIGHBOURS), STEP))
+
+
+@dataclass(frozen=True, slots=True)
+class Peak:
+    """A highest point, and the covariance that the way up suggests."""
+
+    log_prob: float
+    position: Array  # (k,)
+    covariance: Array  # (k, k)
+
+
+def climb(log_prob: Callable[[Array], Array], begin: Array, root: Array) -> Peak:
+    """Climb to a mode by BFGS on coordinates whitened by `root`, gradients by central differences in one batch."""
+    k, width = len(begin), 1e-3
+    offsets = width * np.concatenate([np.zeros((1, k)), np.eye(k), -np.eye(k)])
+
+    def value_and_slope(step: Array) -> tuple[float, Array]:
+        values = -log_prob(begin + (step + offsets) @ root.T)
+        values = np.where(np.isfinite(values), values, _IMPOSSIBLE)
+        slope = (values[1 : k + 1] - values[k + 1 :]) / (2.0 * width)
+        return float(values[0]), np.clip(slope, -1e4, 1e4)
+
+    found = optimize.minimize(value_and_slope, np.zeros(k), jac=True, method="BFGS", options={"gtol": 0.02, "maxiter": 150})
+    return Peak(-float(found.fun), begin + root @ found.x, root @ found.hess_inv @ root.T)
+
+
+def curvature(log_prob: Callable[[Array], Array], mode: Array, covariance: Array) -> Array:
+    """Covariance (k, k) of the normal approximation at a mode.
+
+    Second differences along axes that are whitened anew at each pass, until they show the identity: on narrow ridges a
+    single pass is wrong by a factor of several.
+    """
+    k, width = len(mode), 0.5
+    first, second = np.triu_indices(k, 1)
+    axes = np.eye(k)
+    steps = np.concatenate([axes, axes[first] + axes[second]])
+    steps = width * np.concatenate([np.zeros((1, k)), steps, -steps])
+    for _ in range(_MOST_PASSES):
+        root = np.linalg.cholesky(covariance)
+        drop = -log_prob(mode + steps @ root.T)
+        drop = np.minimum(np.where(np.isfinite(drop), drop, _IMPOSSIBLE) - drop[0], 60.0)
+        half = (len(steps) - 1) // 2
+        both = drop[1 : half + 1] + drop[half + 1 :]  # even part: twice the drop along each step
+        hessian = np.diag(both[:k]) / width**2
+        mixed = (both[k:] - both[first] - both[second]) / (2.0 * width**2)
+        hessian[first, second] = hessian[second, first] = mixed
+        values, vectors = np.linalg.eigh(hessian)
+        inverse = (vectors / np.clip(values, 1e-2, 1e4)) @ vectors.T
+        covariance = root @ inverse @ root.T
+        covariance = 0.5 * (covariance + covariance.T)
+        if np.abs(hessian - np.eye(k)).max() < _WHITE_ENOUGH:
+            break
+    return covariance
