@@ -95,7 +95,7 @@ def _names(folder: Path) -> list[str]:
 def _written(folder: Path) -> dict[str, str]:
     path = folder / CHECKSUMS
     try:
-        lines = path.read_text(encoding="utf-8").splitlines()
+        lines = path.read_text(encoding="utf-8").removesuffix("\n").split("\n")
     except (OSError, UnicodeDecodeError):
         raise Refusal(
             folder.as_posix(),
@@ -105,6 +105,8 @@ def _written(folder: Path) -> dict[str, str]:
         ) from None
     written = {}
     for number, line in enumerate(lines, start=1):
+        if not line:
+            continue
         match = _LINE.fullmatch(line)
         if match is None:
             raise Refusal(
