@@ -10,6 +10,7 @@ from typing import Literal
 import numpy as np
 from numpy.typing import NDArray
 
+from reconcile.campaign.kinds import KINDS
 from reconcile.invent import nature
 from reconcile.invent.truth import BENCH, Truth, draw_truth, strongest_fluence
 
@@ -19,17 +20,19 @@ RASTER_SITES = 500  # like sites in the scan that fills up a sample
 DEPTH_LIMIT = 30e-9  # [m] the profiler's detection limit
 SOUND_FROM = 0.3  # [1] excess from which the probe's pulse is read
 STRAYS, MISREADS = 3, 3
+SLIPPED_POINT = 10.0
 
-# How finely the laboratory writes its numbers down [SI].
+# How finely the laboratory writes its numbers down [SI]; what is not listed, to three digits.
 RESOLUTION = {
     "crater-depth": 1e-9,
     "crater-diameter": 0.1e-6,
     "bubble-radius": 0.1e-6,
     "bubble-lifetime": 0.01e-6,
-    "pressure-integral": 0.01,
     "arrival-time": 1e-9,
     "median-diameter": 0.01e-9,
 }
+# Uncertainties that the laboratory states as a share of what it read.
+RELATIVE_U = {"pressure-integral": 0.06}
 
 
 @dataclass(frozen=True, slots=True)
@@ -245,7 +248,7 @@ def _depth(shot: str, effects: nature.Shot, truth: Truth, rng: np.random.Generat
     kind = "crater-depth"
     true = _scattered(kind, effects.depth, truth, rng)
     u = _rounded(float(rng.uniform(8e-9, 15e-9)), 1e-9)
-    value = _rounded(truth["scale.profiler"] * true + u * float(rng.standard_normal()), RESOLUTION[kind])
+    value = _as_written(kind, truth["scale.profiler"] * true + u * float(rng.standard_normal()))
     if value < DEPTH_LIMIT:
         return InventedReading(kind, shot, None, None, None, None, DEPTH_LIMIT, true)
     return InventedReading(kind, shot, None, None, value, u, None, true)
@@ -254,7 +257,7 @@ def _depth(shot: str, effects: nature.Shot, truth: Truth, rng: np.random.Generat
 def _diameter(shot: str, effects: nature.Shot, truth: Truth, rng: np.random.Generator) -> InventedReading:
     kind, u = "crater-diameter", 0.5e-6
     true = _scattered(kind, effects.diameter, truth, rng)
-    value = _rounded(abs(true + u * float(rng.standard_normal())), RESOLUTION[kind])
+    value = _as_written(kind, abs(true + u * float(rng.standard_normal())))
     return InventedReading(kind, shot, None, None, value, u, None, true)
 
 
@@ -267,7 +270,7 @@ def _radii(shot: str, bubble: nature.Bubble, truth: Truth, rng: np.random.Genera
         if delay > 0.8 * bubble.lifetime or any(reading.delay == delay for reading in readings):
             continue
         true = _scattered(kind, bubble.radius(delay), truth, rng)
-        value = _rounded(true + u * float(rng.standard_normal()), RESOLUTION[kind])
+        value = _as_written(kind, true + u * float(rng.standard_normal()))
         readings.append(InventedReading(kind, shot, None, delay, value, u, None, true))
     return readings
 
@@ -275,7 +278,7 @@ def _radii(shot: str, bubble: nature.Bubble, truth: Truth, rng: np.random.Genera
 def _lifetime(shot: str, bubble: nature.Bubble, truth: Truth, rng: np.random.Generator) -> InventedReading:
     kind, u = "bubble-lifetime", 0.15e-6
     true = _scattered(kind, bubble.lifetime, truth, rng)
-    value = _rounded(true + u * float(rng.standard_normal()), RESOLUTION[kind])
+    value = _as_written(kind, true + u * float(rng.standard_normal()))
     return InventedReading(kind, shot, None, None, value, u, None, true)
 
 
@@ -283,12 +286,13 @@ def _sound(shot: str, effects: nature.Shot, truth: Truth, rng: np.random.Generat
     """Read the probe: pressures with the sensitivity that the laboratory believes, times on its recorder's clock."""
     gain = truth["probe_sensitivity"] / BENCH["probe_sensitivity"].value
     true = _scattered("pressure-integral", effects.pressure_integral, truth, rng)
-    value = _digits(gain**2 * true * (1 + 0.06 * float(rng.standard_normal())), 3)
-    integral = InventedReading("pressure-integral", shot, None, None, value, 0.06 * value, None, true)
+    share = RELATIVE_U["pressure-integral"]
+    value = _as_written("pressure-integral", gain**2 * true * (1 + share * float(rng.standard_normal())))
+    integral = InventedReading("pressure-integral", shot, None, None, value, share * value, None, true)
 
     arrived = effects.arrival_time + truth["scatter.arrival-time"] * float(rng.standard_normal())
     late = truth["trigger_offset"] - BENCH["trigger_offset"].value
-    clock = _rounded(arrived + late + 3e-9 * float(rng.standard_normal()), RESOLUTION["arrival-time"])
+    clock = _as_written("arrival-time", arrived + late + 3e-9 * float(rng.standard_normal()))
     return [integral, InventedReading("arrival-time", shot, None, None, clock, 3e-9, None, arrived)]
 
 
@@ -310,7 +314,7 @@ def _samples(
         edges = step * np.arange(math.floor(sizes.min() / step), math.ceil(sizes.max() / step) + 1)
         counts = np.histogram(sizes, edges)[0]
         histograms.append(Histogram(name, edges, counts))
-        value = _rounded(float(np.median(sizes)), RESOLUTION["median-diameter"])
+        value = _as_written("median-diameter", float(np.median(sizes)))
         # of a median of n lognormal sizes: sqrt(pi/2) ln(sd)/sqrt(n) in the logarithm
         u = value * math.sqrt(math.pi / 2) * math.log(GEOMETRIC_SD) / math.sqrt(PARTICLES)
         readings.append(InventedReading("median-diameter", None, name, None, value, u, None, scattered))
@@ -327,11 +331,8 @@ def _plant(
     shots = {each.shot.name: each.shot for each in fired}
     planted = list(readings)
     taken: set[str] = set()
-    kinds = [
-        "crater-depth",
-        *rng.permutation(["bubble-lifetime", "crater-diameter", "pressure-integral"])[: STRAYS - 1],
-    ]
-    for kind in kinds:
+    others = rng.permutation(["bubble-lifetime", "crater-diameter", "pressure-integral"])[: STRAYS - 1]
+    for kind, slip in (("crater-depth", SLIPPED_POINT), *((str(other), None) for other in others)):
         fit = [
             index
             for index, reading in enumerate(planted)
@@ -340,12 +341,8 @@ def _plant(
         ]  # fmt: skip
         index = int(rng.choice(fit))
         chosen = planted[index]
-        value = chosen.value or 0.0
-        factor = 10.0 if kind == "crater-depth" else _gross_factor(chosen, truth)
-        wrong = (
-            _digits(factor * value, 3) if kind == "pressure-integral" else _rounded(factor * value, RESOLUTION[kind])
-        )
-        u = 0.06 * wrong if kind == "pressure-integral" else chosen.u
+        wrong = _as_written(kind, (slip or _gross_factor(chosen, truth)) * (chosen.value or 0.0))
+        u = RELATIVE_U[kind] * wrong if kind in RELATIVE_U else chosen.u
         planted[index] = replace(chosen, value=wrong, u=u, stray=True)
         taken.add(chosen.shot or "")
     return tuple(planted)
@@ -364,15 +361,19 @@ def _gross_factor(reading: InventedReading, truth: Truth) -> float:
     """
     value, u = reading.value or 0.0, reading.u or 0.0
     relative = math.hypot(u / value, truth[f"scatter.{reading.kind}"], 1.6 * truth["energy_jitter"])
-    logarithmic = reading.kind in ("bubble-lifetime", "pressure-integral")
     for factor in (1.6, 2.0, 2.5, 3.0, 4.0):
-        if (math.log(factor) if logarithmic else factor - 1) > 6 * relative:
+        if (math.log(factor) if KINDS[reading.kind].logarithmic else factor - 1) > 6 * relative:
             return factor
-    return 10.0
+    return SLIPPED_POINT
 
 
 def _scattered(kind: str, value: float, truth: Truth, rng: np.random.Generator) -> float:
     return value * math.exp(truth[f"scatter.{kind}"] * float(rng.standard_normal()))
+
+
+def _as_written(kind: str, value: float) -> float:
+    """Return a reading's value with the digits that the laboratory gives it."""
+    return _rounded(value, RESOLUTION[kind]) if kind in RESOLUTION else _digits(value, 3)
 
 
 def _rounded(value: float, step: float) -> float:
