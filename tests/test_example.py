@@ -214,10 +214,13 @@ def test_given_true_numbers_are_used():
     assert ratio == pytest.approx([2.0] * len(ratio), rel=1e-5)
 
 
-def test_too_few_shots_for_eight_levels_are_refused():
+def test_too_few_shots_for_eight_levels_are_refused(tmp_path):
     with pytest.raises(ValueError, match="at least 48"):
         invent(1, shots=20)
-    assert len(invent(1, shots=48).shots) == 48
+    small = invent(1, shots=48)
+    assert len(small.shots) == 48
+    small.write(tmp_path / "small", style="untidy")
+    assert (tmp_path / "small" / "campaign.toml").is_file()
 
 
 @pytest.mark.parametrize("style", ["plain", "untidy"])

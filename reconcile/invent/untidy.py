@@ -35,7 +35,8 @@ def blemishes(invented: Invented) -> Blemishes:
     """Choose the shots that the folder's oddities fall on: sound ones, each with all that is needed."""
     planted = {reading.shot for reading in invented.readings if reading.stray}
     planted |= {shot.name for shot in invented.shots if shot.misread_factor != 1.0}
-    free = [shot for shot in invented.shots if shot.name not in planted and shot.sample is None and shot.pulses == 1]
+    free = [shot for shot in invented.shots if shot.name not in planted and shot.sample is None]
+    free.sort(key=lambda shot: shot.pulses)  # single pulses first
     taken: list[str] = []
 
     def choose(kind: str, level: str) -> str:
