@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -50,6 +50,8 @@ class Data:
     believed: dict[str, Believed]
     likelihood: Likelihood  # not yet on a lattice
     anchor: Anchor
+    shots: dict[str, int]  # index of each fitted shot
+    samples: dict[str, Index]  # indices of each sample's shots
 
     @classmethod
     def of(cls, gathered: Gathered, without: tuple[str, ...] = ()) -> Data:
@@ -78,13 +80,26 @@ class Data:
             and (reading.shot in shots or reading.sample in samples)
         )
         readings = tuple(gathered.readings[row] for row in rows)
-        kinds = tuple(kind for kind in KINDS if any(reading.kind == kind for reading in readings))
         indices = {name: np.array(members, dtype=np.intp) for name, members in samples.items()}
         likelihood = Likelihood(conditions, table, readings, campaign.tables, shots, indices)
         energies = np.exp(table.log_energy)
         anchor = Anchor(float(np.exp(table.log_energy.mean())), float(np.quantile(energies, 0.7)))
+        kinds = _kinds_of(readings)
         believed = believed_inputs(campaign, kinds)
-        return cls(conditions, table, readings, rows, kinds, believed, likelihood, anchor)
+        return cls(conditions, table, readings, rows, kinds, believed, likelihood, anchor, shots, indices)
+
+    def keep(self, wanted: Callable[[int, Reading], bool]) -> Data:
+        """Return the same campaign with only the fitted readings that are wanted, told by their position and content."""
+        kept = [n for n, reading in enumerate(self.readings) if wanted(n, reading)]
+        readings = tuple(self.readings[n] for n in kept)
+        tables = self.likelihood.tables
+        likelihood = Likelihood(self.conditions, self.table, readings, tables, self.shots, self.samples)
+        rows, kinds = tuple(self.rows[n] for n in kept), _kinds_of(readings)
+        return replace(self, readings=readings, rows=rows, kinds=kinds, likelihood=likelihood)
+
+    def leave_out(self, positions: tuple[int, ...]) -> Data:
+        """Return the same campaign without some of its fitted readings."""
+        return self.keep(lambda position, _: position not in positions)
 
     def sampled(self) -> tuple[str, ...]:
         """Names of the inputs that the readings or the cuts touch, fixed ones left out."""
@@ -95,6 +110,10 @@ class Data:
         names |= {f"scatter.{kind}" for kind in self.kinds}
         names |= {f"{family}.{reading.table}" for reading in self.readings for family in ("scale", "pixel_pitch")}
         return tuple(name for name, known in self.believed.items() if name in names and not known.density.fixed)
+
+
+def _kinds_of(readings: tuple[Reading, ...]) -> tuple[str, ...]:
+    return tuple(kind for kind in KINDS if any(reading.kind == kind for reading in readings))
 
 
 class Problem:
@@ -124,6 +143,13 @@ class Problem:
         twin = object.__new__(Problem)
         twin.__dict__.update(self.__dict__)
         twin.likelihood = self.data.likelihood.integrate_on(lattice)
+        return twin
+
+    def with_data(self, data: Data) -> Problem:
+        """Return a problem on the same coordinates and priors with some of the readings; not yet on a lattice."""
+        twin = object.__new__(Problem)
+        twin.__dict__.update(self.__dict__)
+        twin.data, twin.likelihood = data, data.likelihood
         return twin
 
     def log_prior(self, position: Array) -> tuple[Array, Inputs]:

@@ -15,6 +15,7 @@ from typing import Any
 
 import numpy as np
 
+from reconcile.campaign.progress import Progress
 from reconcile.inference.adapt import adapt
 from reconcile.inference.model import Array
 from reconcile.inference.problem import Problem
@@ -27,8 +28,6 @@ _STEPS = 20  # in a round
 MOST_ROUNDS = 40
 GOOD_RHAT = 1.01  # rank-normalised split R-hat: Vehtari et al., Bayesian Analysis 16 (2021) 667
 _INDEPENDENT = 0.85  # share of independence moves; the rest are differential-evolution moves, which need no good proposal
-
-Progress = Callable[[str, float], None]  # what is being done, and how much of it is done (0 to 1)
 
 
 @dataclass(frozen=True, slots=True)
@@ -91,13 +90,13 @@ def sample(
     seeds = seed.spawn(ENSEMBLES)
     with _executor(min(workers, ENSEMBLES), start.problem) as run:
         if resumed is None:
-            progress("adapting", 0.0)
+            progress("adapting", 0, 0)
             ensembles = run(_begin, [(start.mode, start.covariance, own) for own in seeds])
         else:
             ensembles = resumed
         for _ in range(MOST_ROUNDS):
             quality = judge(ensembles)
-            progress("sampling", min(quality.min_ess / target, 1.0))
+            progress("sampling", int(min(quality.min_ess, target)), target)
             if keep is not None:
                 keep(ensembles)
             if quality.enough(target):

@@ -49,12 +49,12 @@ def find_start(data: Data, rng: np.random.Generator) -> Start:
             fits.append(_robust_fit(rough, shifted, spread))
     fits.sort(key=lambda fit: fit.cost)
     # The robust fit knows the place better than the shape: its lattice holds that place, the next one the shape as well.
-    problem = _on_lattice_of(data, np.stack([fit.position for fit in fits[:2]]), 0.2 * fits[0].root, rng)
+    problem = on_lattice_of(rough, np.stack([fit.position for fit in fits[:2]]), 0.2 * fits[0].root, rng)
     peaks = sorted((climb(problem.log_prob, fit.position, fit.root) for fit in fits[:2]), key=lambda peak: -peak.log_prob)
     best = peaks[0]
     covariance = curvature(problem.log_prob, best.position, best.covariance)
     for _ in range(2):
-        problem = _on_lattice_of(data, best.position[None], np.linalg.cholesky(covariance), rng)
+        problem = on_lattice_of(rough, best.position[None], np.linalg.cholesky(covariance), rng)
         best = climb(problem.log_prob, best.position, np.linalg.cholesky(covariance))
         covariance = curvature(problem.log_prob, best.position, covariance)
     white = np.linalg.inv(np.linalg.cholesky(covariance))
@@ -148,13 +148,14 @@ def _reading_residuals(data: Data, inputs: Inputs) -> list[Array]:
     return parts
 
 
-def _on_lattice_of(data: Data, centres: Array, root: Array, rng: np.random.Generator) -> Problem:
-    """Put the problem on the lattice points that matter to draws around some places."""
+def on_lattice_of(problem: Problem, centres: Array, root: Array, rng: np.random.Generator) -> Problem:
+    """Return the problem on the lattice points that matter to draws around some places (m, k)."""
+    data = problem.data
     shots = data.likelihood.read_shots
     if not len(shots):
-        return Problem(data)
+        return problem
     full = Lattice.of(data.table, full_points(data.table, shots, STEP), STEP)
-    problem = Problem(data, full)
+    problem = problem.on(full)
     scattered = centres[rng.integers(len(centres), size=4 * _PROBES)]
     scattered = scattered + rng.standard_normal(scattered.shape) @ root.T
     usable = scattered[np.isfinite(problem.log_prior(scattered)[0])][: _PROBES - len(centres)]
