@@ -7,7 +7,9 @@ from openpyxl.styles import Font
 from pytest import approx
 
 from reconcile.campaign.files import sha256_of, whole_folder
+from reconcile.campaign.manifest import load
 from reconcile.campaign.refusal import Refusal
+from reconcile.gather import gather
 
 FULL_LOG = """Shot,Energy (mJ),N,Level,Sample,Sites,Probe (mm),w (um),T (%),Delay (ns),Time,Remarks
 s001,0.010,10,low,A,4,5.1,20,50,800,10:31,first
@@ -312,6 +314,14 @@ def test_no_pattern_looks_into_an_output_folder(tmp_path):
     assert [str(one.place) for one in found.readings][-1] == "more/craters_2.csv!line 2"
     assert len(found.readings) == 3
     assert found.unasked == ()
+
+
+def test_progress_is_told_and_workers_change_nothing(tmp_path):
+    told = []
+    campaign = load(write(tmp_path))
+    found = gather(campaign, workers=4, progress=lambda stage, done, total: told.append((stage, done, total)))
+    assert told == [("reading", 0, 1), ("reading", 1, 1)]
+    assert found == gather(campaign)
 
 
 def test_nothing_is_written_into_the_campaign_folder(tmp_path):

@@ -269,6 +269,19 @@ def test_hidden_and_struck_rows_names_with_zeros_and_percentages_are_kept_as_sho
     assert number(sheet.rows[2].cells["uncertainty"], sheet.columns["uncertainty"]) == approx(4.0)
 
 
+def test_a_percentage_where_a_length_belongs_is_refused(tmp_path):
+    def percent(sheet):
+        sheet["B2"].number_format = "0%"
+        sheet["C2"].number_format = "0%"
+
+    path = book(tmp_path, [["Shot", "Depth (um)", "u"], ["s1", 0.05, 0.04]], percent)
+    sheet = read(path, columns=COLUMNS | {"uncertainty": "u"})
+    with pytest.raises(Refusal, match=r"B2: found 5 % in 'Depth \(um\)'; expected a number in um"):
+        values(sheet)
+    with pytest.raises(Refusal, match=r"C2: found 4 % in 'u'.*units = \{ uncertainty = \"%\" \}"):
+        values(sheet, "uncertainty")
+
+
 def test_a_wrong_dimension_tag_loses_no_rows(tmp_path):
     path = book(tmp_path, [["Shot", "Depth (um)"], *([f"s{n}", n] for n in range(1, 50))])
     rewrite(path, b'<dimension ref="A1:B50"', b'<dimension ref="A1:A1"')

@@ -153,7 +153,7 @@ def table_columns(kind: str) -> dict[str, str | None]:
 def table_keys(kind: str) -> tuple[str, ...]:
     """Return the keys of a [[readings]] table of this kind."""
     if kind in FILE_KINDS:
-        without = {"file", "sheet"}
+        without = {"file", "sheet"} | (set() if kind in FILE_COLUMNS else {"columns", "units"})
         return tuple(key for key in READINGS_KEYS if key not in without) + FILE_KINDS[kind]
     return READINGS_KEYS + (VALUE_KEYS if kind in KINDS else ())
 

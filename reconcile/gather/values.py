@@ -116,8 +116,11 @@ def check_whole(row: TableRow) -> None:
 def _delay(kind: Kind, row: TableRow, sheet: SheetRead, known: Known, target: str) -> float:
     column = sheet.columns.get("delay")
     cell = row.cells.get("delay")
-    value = number(cell, column) if column is not None else None
-    delay = in_si(value, column) if value is not None and column is not None else known.log.shots[target].delay
+    if column is None:
+        delay = known.log.shots[target].delay
+    else:
+        value = number(cell, column)
+        delay = None if value is None else in_si(value, column)
     if delay is None or delay < 0:
         place = (cell or row.cells["value"]).place
         raise Refusal(

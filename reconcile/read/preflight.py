@@ -176,17 +176,20 @@ class _Attributes(_Guard):
 
 def _sheet_parts(archive: zipfile.ZipFile) -> dict[str, str]:
     """Return the part of each worksheet by its name; sheets that hold a chart only are left out."""
-    sheets, relations = _Attributes("sheet"), _Attributes("Relationship")
-    book = "xl/workbook.xml"
+    sheets, relations, package = _Attributes("sheet"), _Attributes("Relationship"), _Attributes("Relationship")
+    _walk(archive, "_rels/.rels", package)
+    documents = [entry["Target"] for entry in package.found if entry["Type"].endswith("/officeDocument")]
+    book = documents[0].lstrip("/") if documents else "xl/workbook.xml"
+    folder, name = posixpath.split(book)
     _walk(archive, book, sheets)
-    _walk(archive, "xl/_rels/workbook.xml.rels", relations)
+    _walk(archive, f"{folder}/_rels/{name}.rels", relations)
     target = {entry["Id"]: entry["Target"] for entry in relations.found if entry["Type"].endswith("/worksheet")}
     found = {}
     for sheet in sheets.found:
         relation = next(value for key, value in sheet.items() if key.endswith(":id") or key == "r:id")
         if relation in target:
             part = target[relation]
-            found[sheet["name"]] = part[1:] if part.startswith("/") else posixpath.normpath(f"xl/{part}")
+            found[sheet["name"]] = part[1:] if part.startswith("/") else posixpath.normpath(f"{folder}/{part}")
     return found
 
 

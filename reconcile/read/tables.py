@@ -98,6 +98,15 @@ def number(cell: Cell | None, column: Column) -> float | None:
     if cell.fault is not None:
         raise unreadable(cell, f"a number in '{column.header}'")
     if isinstance(cell.content, float):
+        if cell.percent and column.unit != "%" and column.si_unit != "1":
+            raise Refusal(
+                cell.place,
+                found=f"{cell.content * 100:g} % in '{column.header}'",
+                expected=f"a number in {column.unit}",
+                remedy='Add units = { uncertainty = "%" } to this table of the manifest.'
+                if column.key == "uncertainty"
+                else "Correct the cell, or its format.",
+            )
         return cell.content * 100 if cell.percent and column.unit == "%" else cell.content
     text = cell.text
     if is_blank(text):

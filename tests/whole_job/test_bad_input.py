@@ -110,6 +110,12 @@ MANIFESTS = {
     "energy and power": ([("energy =", 'power = "P (mW)", energy =')], "", "line 24!shots.columns", "Keep the one"),
     "power without a rate": ([("energy =", "power =")], "", "beam.repetition_rate", "Add repetition_rate"),
     "a log without energy": ([(', energy = "Energy (uJ)"', "")], "", "line 24!shots.columns", "holds the energy"),
+    "columns for frames": (
+        [],
+        FRAMES + 'columns = { shot = "Shot" }',
+        "line 35!readings.2.columns",
+        "Take it out",
+    ),
     "a bad unit for a column": ([], 'units = { value = "uJ" }', "readings.1.units.value", "Correct the unit"),
     "a bad decimal sign": ([], 'decimal = ";"', "readings.1.decimal", "Write one of them"),
     "sound without a probe": ([], SOUND, "probe.standoff", "pressure-integral"),
@@ -316,6 +322,8 @@ def sheet(body):
     main = 'xmlns="http://schemas.openxmlformats.org/spreadsheetml/2006/main"'
     relations = "http://schemas.openxmlformats.org/officeDocument/2006/relationships"
     return {
+        "_rels/.rels": '<Relationships xmlns="http://schemas.openxmlformats.org/package/2006/relationships">'
+        f'<Relationship Id="rId1" Type="{relations}/officeDocument" Target="xl/workbook.xml"/></Relationships>',
         "xl/workbook.xml": f'<workbook {main} xmlns:r="{relations}"><sheets>'
         '<sheet name="one" sheetId="1" r:id="rId1"/></sheets></workbook>',
         "xl/_rels/workbook.xml.rels": '<Relationships xmlns="http://schemas.openxmlformats.org/package/2006/relationships">'
