@@ -90,8 +90,10 @@ def functions(module: Path) -> Iterator[ast.FunctionDef | ast.AsyncFunctionDef]:
 
 
 def reasoned(module: Path, node: ast.AST) -> bool:
-    """Tell whether `# reason:` stands on the first line of what breaks a rule."""
-    return "# reason:" in module.read_text(encoding="utf-8").splitlines()[node.lineno - 1]
+    """Tell whether `# reason:` stands beside what breaks a rule: on its line, or on a line of a function's signature."""
+    lines = module.read_text(encoding="utf-8").splitlines()
+    last = node.body[0].lineno - 1 if isinstance(node, ast.FunctionDef | ast.AsyncFunctionDef) else node.lineno
+    return any("# reason:" in line for line in lines[node.lineno - 1 : max(last, node.lineno)])
 
 
 def name_of(module: Path) -> str:
