@@ -52,7 +52,6 @@ def read_decisions(
         if not decision.reason and decision.decision != "undecided":
             collected.note(decision.place, "a decision without a reason")
         target = (decision.shot, decision.sample, decision.kind, decision.source)
-        held.pop(target, None)
         held[target] = decision
     return tuple(held.values())
 
