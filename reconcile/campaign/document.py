@@ -32,7 +32,7 @@ class Document:
                 self.name,
                 found=f"no readable file {path.as_posix()} ({error.strerror})",
                 expected="a campaign folder that holds campaign.toml",
-                remedy="Give the campaign's folder, or make a first campaign.toml with 'reconcile draft'.",
+                remedy="Give the campaign's folder, or write a campaign.toml there as README shows.",
             ) from None
         try:
             text = raw.decode("utf-8-sig")

@@ -285,7 +285,7 @@ def test_decisions_without_their_columns_refuse_the_campaign(tmp_path):
 
 
 def test_no_manifest_not_utf8_and_a_missing_folder_are_refused(tmp_path):
-    with pytest.raises(Refusal, match="reconcile draft"):
+    with pytest.raises(Refusal, match="as README shows"):
         gathered(tmp_path / "nowhere")
     folder = write(tmp_path / "a")
     file = folder / "campaign.toml"
