@@ -143,7 +143,7 @@ def verb_closeout(args: argparse.Namespace) -> int:
             resume=args.resume,
             progress=progress,
         )
-    _say(*close_out_lines(close_out, folder), *([message] if message else []))
+    _say(*close_out_lines(close_out, folder, message))
     return PROVISIONAL if close_out.status == "provisional" else DONE
 
 

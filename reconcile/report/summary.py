@@ -24,7 +24,7 @@ ANSWERS = (
 MOST_NAMED = 12  # shots or refusals named one by one; the report has all
 
 
-def close_out_lines(close_out: CloseOut, folder: Path) -> list[str]:
+def close_out_lines(close_out: CloseOut, folder: Path, message: str) -> list[str]:
     """Return the answer with its uncertainty, the status and its reasons, the shots by verdict, and where the report is."""
     campaign = close_out.gathered.campaign
     text = [lines.plain(campaign.title or campaign.name), f"status: {close_out.status}"]
@@ -32,7 +32,7 @@ def close_out_lines(close_out: CloseOut, folder: Path) -> list[str]:
     text += ["", *_answers(close_out), "", *_shots(close_out), *_readings(close_out)]
     text += _refused(close_out.gathered.refused)
     text += [f"note: {lines.plain(sentence)}" for sentence in close_out.could_not_tell]
-    return [*text, "", f"report: {(folder / 'report.html').as_posix()}"]
+    return [*text, "", *([message] if message else []), f"report: {(folder / 'report.html').as_posix()}"]
 
 
 def _answers(close_out: CloseOut) -> list[str]:
@@ -63,8 +63,8 @@ def _shots(close_out: CloseOut) -> list[str]:
     text = [f"{lines.count(len(close_out.shots), 'shot')}: {', '.join(parts)}"]
     doubtful = [shot for shot in close_out.shots if shot.verdict in ("misread", "stray")]
     for result in doubtful[:MOST_NAMED]:
-        reasons = "; ".join(lines.plain(reason) for reason in result.reasons)
-        text.append(f"  {lines.plain(result.shot.name)}: {result.verdict}{f' ({reasons})' if reasons else ''}")
+        text.append(f"  {lines.plain(result.shot.name)}: {result.verdict}")
+        text += [f"    {lines.plain(reason)}" for reason in result.reasons]
     if len(doubtful) > MOST_NAMED:
         text.append(f"  and {len(doubtful) - MOST_NAMED} more")
     return text
