@@ -15,7 +15,7 @@ from reconcile.inference.outcome import CloseOut
 from reconcile.report.write import write
 
 
-def closeout(
+def closeout(  # reason: the options of one verb
     path: Path,
     *,
     out: Path | None = None,
@@ -25,7 +25,7 @@ def closeout(
     without: tuple[str, ...] = (),
     resume: bool = False,
     progress: Progress = silent,
-) -> tuple[CloseOut, Path, str]:  # reason: the options of one verb
+) -> tuple[CloseOut, Path, str]:
     """Read, fit, judge and report a campaign.
 
     Parameters

@@ -49,7 +49,9 @@ def adapt(log_prob: Callable[[Array], Array], mode: Array, covariance: Array, rn
     """
     k = len(mode)
     defence = Proposal.normal_like(mode, 1.3 * covariance, _DEFENCE_FREEDOM)
-    proposals: list[Mixture] = [Mixture(Proposal.normal_like(mode, 1.2 * covariance, _DEFENCE_FREEDOM), defence, _DEFENCE)]
+    proposals: list[Mixture] = [
+        Mixture(Proposal.normal_like(mode, 1.2 * covariance, _DEFENCE_FREEDOM), defence, _DEFENCE)
+    ]
     points = np.empty((0, k))
     values = np.empty(0)
     densities = np.empty((0, 0))

@@ -15,6 +15,7 @@ from reconcile.campaign.kinds import KINDS
 from reconcile.inference.model import Array
 from reconcile.inference.outcome import KindResult
 from reconcile.inference.problem import Problem
+from reconcile.inference.proposal import root_of
 from reconcile.inference.start import Start, climb, curvature, on_lattice_of
 
 # A direction counts as known from readings on both sides when the variances of both together are below this share of
@@ -42,7 +43,9 @@ def agreement(start: Start, counts: dict[str, int], rng: np.random.Generator) ->
     """
     problem = start.problem
     kinds = problem.data.kinds
-    compared = [n for n, name in enumerate(problem.names) if not name.startswith(("scatter.", "energy_", "stray_", "misread_"))]
+    compared = [
+        n for n, name in enumerate(problem.names) if not name.startswith(("scatter.", "energy_", "stray_", "misread_"))
+    ]
     metric = _prior_covariance(problem, rng)[np.ix_(compared, compared)]
     values = {kind: _split(start, kind, compared, metric, rng) if len(kinds) > 1 else None for kind in kinds}
     tested = sum(value is not None for value in values.values())
@@ -88,7 +91,7 @@ def _side(start: Start, kind: str, compared: list[int], rng: np.random.Generator
     data = problem.data.keep(lambda _, reading: (reading.kind == kind) == alone)
     part = problem.with_data(data)
     # The whole posterior's scatter and rates hold on both sides: a single kind cannot tell its scatter from the jitter.
-    root = np.linalg.cholesky(start.covariance)
+    root = root_of(start.covariance)
     part = on_lattice_of(part, start.mode[None], root, rng)
     peak = climb(part.log_prob, start.mode, root)
     covariance = curvature(part.log_prob, peak.position, peak.covariance)

@@ -150,9 +150,7 @@ def _unpacked(arrays: dict[str, Any]) -> Stored:
         mixture = Mixture(proposals[0], proposals[1], float(arrays[f"e{number}.share"]))
         ensembles.append(Ensemble(mixture, position, state, chain, log_prob, int(evaluations), accepted))
     late = tuple(int(row) for row in arrays["late"])
-    return Stored(
-        arrays["mode"], arrays["covariance"], float(arrays["log_prob_at_mode"]), late, points, ensembles
-    )
+    return Stored(arrays["mode"], arrays["covariance"], float(arrays["log_prob_at_mode"]), late, points, ensembles)
 
 
 def _unpacked_proposal(prefix: str, arrays: dict[str, Any]) -> Proposal:

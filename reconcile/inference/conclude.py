@@ -11,7 +11,7 @@ from reconcile.campaign.readings import Gathered
 from reconcile.inference.agreement import agreement
 from reconcile.inference.fit import Fitted
 from reconcile.inference.lattice import REACH
-from reconcile.inference.model import EXPECTED, RELATIVE_SCATTER, Array, Expected, Exposures
+from reconcile.inference.model import RELATIVE_SCATTER, Expected, Exposures, expected_of
 from reconcile.inference.outcome import Band, CloseOut, InputResult, KindResult, Sampling, Share, Strained
 from reconcile.inference.posterior import budgets, correlations, input_results, stored, strained_inputs
 from reconcile.inference.problem import chosen_draws
@@ -101,7 +101,10 @@ def _could_not_tell(
     untold = [
         result.entry.name
         for result in inputs
-        if result.entry.belongs_to == "m" and not result.entry.derived and (result.informed or 0.0) < _LITTLE and not result.fixed
+        if result.entry.belongs_to == "m"
+        and not result.entry.derived
+        and (result.informed or 0.0) < _LITTLE
+        and not result.fixed
     ]
     sentences = []
     if untold:
@@ -121,7 +124,9 @@ def _could_not_tell(
     if len([kind for kind in kinds if KINDS[kind].target == "shot"]) < 2:
         sentences.append("With fewer than two kinds on a shot, a misread energy cannot be told from a stray reading.")
     if fitted.problem.likelihood.lattice is None:
-        sentences.append("No reading belongs to a single shot: each shot's deviation from its log stays as believed before.")
+        sentences.append(
+            "No reading belongs to a single shot: each shot's deviation from its log stays as believed before."
+        )
     sentences.append(
         f"A pulse energy wrong by more than a factor of {np.exp(REACH):.0f} lies outside what was considered."
     )
@@ -144,7 +149,7 @@ def _bands(fitted: Fitted, rng: np.random.Generator) -> list[Band]:
     for kind in data.kinds:
         delays = [r.delay for r in data.readings if r.kind == kind and r.delay is not None]
         delay = float(np.median(delays)) if delays else None
-        expected = _expected(kind, delay, state)
+        expected = expected_of(state, kind, None if delay is None else np.full(1, delay))
         scatter = inputs[f"scatter.{kind}"] * rng.standard_normal(expected.shape)
         if KINDS[kind].logarithmic:
             spread = expected * np.exp(scatter)
@@ -153,10 +158,3 @@ def _bands(fitted: Fitted, rng: np.random.Generator) -> list[Band]:
         low, median, high = np.quantile(spread, [0.025, 0.5, 0.975], axis=1)
         bands.append(Band(kind, delay, grid, absorbed, low, median, high))
     return bands
-
-
-def _expected(kind: str, delay: float | None, state: Expected) -> Array:
-    if delay is not None:
-        return state.radius_during(delay, state.motion)
-    return state.median_diameter if kind == "median-diameter" else EXPECTED[kind](state)
-

@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
-from typing import cast
 
 import numpy as np
 from numpy.typing import NDArray
@@ -116,7 +115,7 @@ class Density:
             case "loguniform":
                 return -np.log(x) - math.log(math.log(b / a))
             case "beta":
-                return special.xlogy(a - 1.0, x) + special.xlog1py(b - 1.0, -x) - special.betaln(a, b)
+                return np.asarray(special.xlogy(a - 1.0, x) + special.xlog1py(b - 1.0, -x) - special.betaln(a, b))
             case "fixed":
                 return np.zeros_like(x)
         value = -0.5 * self._score(x) ** 2 - math.log(b) - _LOG_ROOT_2PI
@@ -132,10 +131,10 @@ class Density:
             case "loguniform":
                 return np.clip(np.log(x / a) / math.log(b / a), 0.0, 1.0)
             case "beta":
-                return cast(Array, special.betainc(a, b, x))
+                return special.betainc(a, b, x)
             case "fixed":
                 return (x >= a).astype(float)
-        return cast(Array, special.ndtr(self._score(x)))
+        return special.ndtr(self._score(x))
 
     def _quantile_uncut(self, p: Array) -> Array:
         family, a, b = self.prior.family, self.prior.a, self.prior.b
@@ -145,9 +144,9 @@ class Density:
             case "loguniform":
                 return a * (b / a) ** p
             case "beta":
-                return cast(Array, special.betaincinv(a, b, p))
+                return special.betaincinv(a, b, p)
             case "normal":
                 return a + b * special.ndtri(p)
             case "lognormal":
                 return a * np.exp(b * special.ndtri(p))
-        return cast(Array, special.expit(special.logit(a) + b * special.ndtri(p)))
+        return special.expit(special.logit(a) + b * special.ndtri(p))

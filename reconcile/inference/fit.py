@@ -14,7 +14,7 @@ from reconcile.inference.coordinates import Inputs
 from reconcile.inference.lattice import STEP, Lattice, full_points
 from reconcile.inference.model import Array, Expected
 from reconcile.inference.problem import Data, Problem
-from reconcile.inference.sampling import Draws, sample
+from reconcile.inference.sampling import Draws, Memory, sample
 from reconcile.inference.start import Start, find_start
 
 EFFORTS = {"quick": 400, "normal": 1000, "long": 4000}  # smallest effective sample size aimed at
@@ -77,13 +77,16 @@ def fit(
     lattice = start.problem.likelihood.lattice
     points = None if lattice is None else lattice.points()
     draws = sample(
-        start,
+        start.problem,
+        (start.mode, start.covariance),
         for_sampling,
         target=target,
         workers=workers,
         progress=progress,
-        resumed=None if stored is None else stored.ensembles,
-        keep=lambda now: checkpoint.save(Stored(start.mode, start.covariance, start.log_prob, late, points, now)),
+        memory=Memory(
+            None if stored is None else stored.ensembles,
+            lambda now: checkpoint.save(Stored(start.mode, start.covariance, start.log_prob, late, points, now)),
+        ),
     )
     thin = max(1, -(-draws.log_prob.size // MOST_STORED))
     position, log_prob = draws.position[::thin], draws.log_prob[::thin]

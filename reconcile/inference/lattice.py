@@ -75,12 +75,15 @@ class Lattice:
         pair_point = np.concatenate([points[shot] for shot in shots])
         owner = shots[pair_shot]
         keys = np.stack(
-            [pair_point.astype(float), table.pulses[owner], table.spot_radius[owner], np.nan_to_num(table.standoff[owner])]
+            [
+                pair_point.astype(float),
+                table.pulses[owner],
+                table.spot_radius[owner],
+                np.nan_to_num(table.standoff[owner]),
+            ]
         )
         unique, pair_node = np.unique(keys, axis=1, return_inverse=True)
-        nodes = Exposures(
-            np.exp(unique[0] * step)[:, None], unique[1][:, None], unique[2][:, None], unique[3][:, None]
-        )
+        nodes = Exposures(np.exp(unique[0] * step)[:, None], unique[1][:, None], unique[2][:, None], unique[3][:, None])
         deviation = (pair_point * step - table.log_energy[owner])[:, None]
         first = np.concatenate([[0], np.cumsum(counts)[:-1]]).astype(np.intp)
         return cls(step, shots, first, pair_shot, pair_node.ravel().astype(np.intp), deviation, nodes)

@@ -7,7 +7,7 @@ The mixture on the deviation that all readings of a shot share is our own extens
 from __future__ import annotations
 
 import math
-from collections.abc import Callable
+from collections.abc import Callable, Iterator
 from dataclasses import dataclass
 
 import numpy as np
@@ -48,15 +48,6 @@ class Details:
     stray: Array  # (readings, draws) probability; NaN where not fitted
     mean: Array  # (readings, draws) expected reading; NaN where not fitted
     variance: Array  # (readings, draws) of what such a reading should be, scatter included, its own u left out
-
-
-@dataclass(frozen=True, slots=True)
-class _Asked:
-    """What the model expects at the pairs (or samples) of one slot, each (m, draws)."""
-
-    expected: Array  # on the scale of the residual
-    width: Array  # of stray readings
-    error: Array  # standard deviation that the closed form itself adds
 
 
 class Likelihood:
@@ -125,14 +116,15 @@ class Likelihood:
             weights = product / np.add.reduceat(product, lattice.first, axis=0)[lattice.pair_shot]
             sound, wrong = self._deviation_prior(inputs, lattice)
             misread = np.add.reduceat(weights * wrong / (sound + wrong), lattice.first, axis=0)
-            for slot, (pairs, cell), asked in self._asked_of_shots(inputs, lattice):
-                parts = self._collect(slot, cell, asked, weights[pairs], inputs)
+            for number, (slot, cell) in enumerate(self._cells_of_shots(inputs, lattice)):
+                pairs, owner = self._pairs[number]
+                parts = _average(slot, cell, owner, weights[pairs], inputs["stray_rate"])
                 stray[slot.rows], mean[slot.rows], variance[slot.rows] = parts
         if self.sample_slots:
             total = total + self._sample_terms(inputs, product)
-            for slot, asked in self._asked_of_samples(inputs, product):
-                cell = np.arange(len(slot.target))
-                parts = self._collect(slot, cell, asked, np.ones((len(cell), shape[1])), inputs)
+            for slot, cell in self._cells_of_samples(inputs, product):
+                owner, even = np.arange(len(slot.target)), np.ones((len(slot.target), shape[1]))
+                parts = _average(slot, cell, owner, even, inputs["stray_rate"])
                 stray[slot.rows], mean[slot.rows], variance[slot.rows] = parts
         return Details(total, weights, misread, stray, mean, variance)
 
@@ -153,8 +145,9 @@ class Likelihood:
         sound, wrong = self._deviation_prior(inputs, lattice)
         product = sound + wrong
         taken = np.zeros((len(lattice.shots), product.shape[-1]))
-        for number, (slot, (pairs, cell), asked) in enumerate(self._asked_of_shots(inputs, lattice), start=1):
-            part = mixture.density(self._cell(slot, cell, asked, inputs), inputs["stray_rate"], censored=slot.censored)
+        for number, (slot, cell) in enumerate(self._cells_of_shots(inputs, lattice), start=1):
+            pairs, _ = self._pairs[number - 1]
+            part = mixture.density(cell, inputs["stray_rate"], censored=slot.censored)
             if len(pairs) == len(product):
                 product *= part
             else:
@@ -166,7 +159,7 @@ class Likelihood:
         total = np.add.reduceat(product, lattice.first, axis=0)
         return (np.log(np.maximum(total, 1e-300)) + taken + math.log(lattice.step)).sum(axis=0), product
 
-    def _asked_of_shots(self, inputs: Inputs, lattice: Lattice) -> list[tuple[Slot, tuple[Index, Index], _Asked]]:
+    def _cells_of_shots(self, inputs: Inputs, lattice: Lattice) -> Iterator[tuple[Slot, Cell]]:
         """Ask the model once at every node, then hand each slot what it expects at its pairs."""
         state = Expected(self.conditions, inputs, lattice.nodes)
         at_nodes: dict[str, Array] = {}
@@ -176,58 +169,41 @@ class Likelihood:
                 at_nodes[key] = make(state)
             return at_nodes[key]
 
-        asked = []
-        for slot, (pairs, cell) in zip(self.slots, self._pairs, strict=True):
+        for slot, (pairs, owner) in zip(self.slots, self._pairs, strict=True):
             node = lattice.pair_node[pairs]
             width = once(f"width {slot.kind}", STRAY_WIDTH[slot.kind])
             width = width if width.ndim == 1 else width[node]
-            if slot.delay is not None:
-                motion = once("motion", lambda state: state.motion)[:, node]
-                expected, error = state.radius_during(slot.delay[cell][:, None], motion), MOTION_ERROR * motion[0]
+            if slot.delay is None:
+                expected, shared = self._as_read(slot, once(slot.kind, EXPECTED[slot.kind]), inputs)
+                expected, shared = _taken(expected, node), _taken(shared, node)
             else:
-                expected, error = once(slot.kind, _scaled(slot.kind))[node], np.zeros(1)
-            asked.append((slot, (pairs, cell), _Asked(expected, width, error)))
-        return asked
+                motion = once("motion", lambda state: state.motion)[:, node]
+                radius = state.radius_during(slot.delay[owner][:, None], motion)
+                expected, shared = self._as_read(slot, radius, inputs, MOTION_ERROR * motion[0])
+            yield slot, Cell(slot.value[:, owner, None], slot.u[:, owner, None], expected, shared, width)
 
-    def _cell(self, slot: Slot, cell: Index, asked: _Asked, inputs: Inputs) -> Cell:
-        """Put readings beside what is expected of them, instruments' shared errors included."""
-        numbers = np.unique(slot.table)
-        factors = {n: reading_factor(slot.kind, self.tables[n], self.conditions, inputs) for n in numbers}
-        if len(numbers) == 1:
-            factor = factors[numbers[0]][None, None]
-        else:
-            factor = np.stack([np.broadcast_to(factors[n], (_draws(inputs),)) for n in numbers])
-            factor = factor[np.searchsorted(numbers, slot.table[:, cell])]
-        value, u = slot.value[:, cell, None], slot.u[:, cell, None]
+    def _as_read(self, slot: Slot, expected: Array, inputs: Inputs, error: Array | float = 0.0) -> tuple[Array, Array]:
+        """What the instruments make of true values (m, draws): expected readings and their shared scatter, (r, m, draws).
+
+        `error` is the standard deviation that the closed form itself adds.
+        """
+        factors = [reading_factor(slot.kind, self.tables[n], self.conditions, inputs) for n in slot.tables]
         scatter = inputs[f"scatter.{slot.kind}"]
         if KINDS[slot.kind].logarithmic:
-            variance = scatter**2 + asked.error**2
-            return Cell(value, u, asked.expected + np.log(factor), np.ones((1, 1, 1)), variance, asked.width)
-        reach = asked.expected if slot.kind in RELATIVE_SCATTER else np.ones(1)
-        variance = (scatter * reach) ** 2 + asked.error**2
-        expected = asked.expected * factor + reading_offset(slot.kind, self.conditions, inputs)
-        return Cell(value, u, expected, factor, variance, asked.width)
-
-    def _collect(self, slot: Slot, cell: Index, asked: _Asked, weights: Array, inputs: Inputs) -> tuple[Array, ...]:
-        """Average over each cell's pairs: stray probability, expected reading, its variance; (r, c, draws) each."""
-        parts = self._cell(slot, cell, asked, inputs)
-        stray = mixture.stray_probability(parts, inputs["stray_rate"], censored=slot.censored)
-        expected = np.broadcast_to(parts.expected, stray.shape)
-        variance = parts.gain**2 * parts.variance
-        if KINDS[slot.kind].logarithmic:
-            expected = np.exp(expected)
-            variance = variance * expected**2
-        first = np.searchsorted(cell, np.arange(len(slot.target)))
-
-        def average(part: Array) -> Array:
-            return np.add.reduceat(weights * part, first, axis=1)
-
-        mean = average(expected)
-        return average(stray), mean, average(expected**2 + variance) - mean**2
+            level = np.log(np.maximum(expected, TINY))
+            shared = np.atleast_2d(np.hypot(scatter, error))[None]
+            return np.stack([level + np.log(factor) for factor in factors]), shared
+        spread = scatter * expected if slot.kind in RELATIVE_SCATTER else np.atleast_2d(scatter)
+        if np.ndim(error):
+            spread = np.hypot(spread, error)
+        offset = reading_offset(slot.kind, self.conditions, inputs)
+        return np.stack([expected * factor + offset for factor in factors]), np.stack(
+            [spread * factor for factor in factors]
+        )
 
     # -- samples -------------------------------------------------------------------------------------------------
 
-    def _asked_of_samples(self, inputs: Inputs, product: Array | None) -> list[tuple[Slot, _Asked]]:
+    def _cells_of_samples(self, inputs: Inputs, product: Array | None) -> Iterator[tuple[Slot, Cell]]:
         """Expect each sample's median: the mean of ln d50 over its shots, weighted with their numbers of particles.
 
         Each shot is taken at the mean deviation that its own readings leave it, so that a misread one does not mislead.
@@ -247,15 +223,14 @@ class Likelihood:
         count = np.array([len(sample) for sample in self.samples], dtype=float)[:, None]
         # Half the jitter moves ln d50 of one shot; what its readings did not settle averages over the sample.
         error = 0.5 * inputs["energy_jitter"] / np.sqrt(count)
-        return [
-            (slot, _Asked(log_median[slot.target], np.ones(1), error[slot.target])) for slot in self.sample_slots
-        ]
+        for slot in self.sample_slots:
+            expected, shared = self._as_read(slot, np.exp(log_median[slot.target]), inputs, error[slot.target])
+            yield slot, Cell(slot.value[..., None], slot.u[..., None], expected, shared, np.ones(1))
 
     def _sample_terms(self, inputs: Inputs, product: Array | None) -> Array:
         """Log-likelihood of the samples' readings, (draws,)."""
         total = np.zeros(_draws(inputs))
-        for slot, asked in self._asked_of_samples(inputs, product):
-            cell = self._cell(slot, np.arange(len(slot.target)), asked, inputs)
+        for slot, cell in self._cells_of_samples(inputs, product):
             part = mixture.density(cell, inputs["stray_rate"], censored=slot.censored)
             total = total + np.log(np.maximum(part, 1e-300)).sum(axis=0)
         return total
@@ -266,8 +241,23 @@ def _draws(inputs: Inputs) -> int:
     return max(np.size(value) for value in inputs.values())
 
 
-def _scaled(kind: str) -> Callable[[Expected], Array]:
-    """Return the expectation of a kind on the scale of its residuals."""
-    if KINDS[kind].logarithmic:
-        return lambda state: np.log(np.maximum(EXPECTED[kind](state), TINY))
-    return EXPECTED[kind]
+def _taken(values: Array, node: Index) -> Array:
+    """Values (r, nodes, draws) at some nodes; what does not differ between nodes stays as it is."""
+    return values if values.ndim < 3 or values.shape[1] == 1 else values[:, node]
+
+
+def _average(slot: Slot, cell: Cell, owner: Index, weights: Array, rate: Array) -> tuple[Array, Array, Array]:
+    """Average over each cell's pairs: stray probability, expected reading, its variance; (r, c, draws) each."""
+    stray = mixture.stray_probability(cell, rate, censored=slot.censored)
+    expected = np.broadcast_to(cell.expected, stray.shape)
+    spread = np.broadcast_to(cell.shared, stray.shape)
+    if KINDS[slot.kind].logarithmic:
+        expected = np.exp(expected)
+        spread = spread * expected
+    first = np.searchsorted(owner, np.arange(len(slot.target)))
+
+    def average(part: Array) -> Array:
+        return np.asarray(np.add.reduceat(weights * part, first, axis=1))
+
+    mean = average(expected)
+    return average(stray), mean, average(expected**2 + spread**2) - mean**2

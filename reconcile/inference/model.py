@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass
 from functools import cached_property
+from typing import TypeAlias
 
 import numpy as np
 from numpy.typing import NDArray
@@ -14,7 +15,7 @@ from reconcile.campaign.materials import properties_of_liquid, properties_of_tar
 from reconcile.physics import beam, bubble, contact, fragments, heating, removal, sound
 from reconcile.physics.matter import Fluid, Metal
 
-Array = NDArray[np.float64]
+Array: TypeAlias = NDArray[np.float64]
 Inputs = Mapping[str, Array]  # by input name; each (draws,) or a scalar array, SI
 
 REFERENCE_INCIDENT = beam.REFERENCE_INCIDENT  # [J/m²] at which the absorbed fraction is stated
@@ -251,6 +252,7 @@ EXPECTED: dict[str, Callable[[Expected], Array]] = {
     "pressure-integral": lambda state: np.maximum(state.pressure_integral, TINY),
     "arrival-time": lambda state: state.pulse.arrival_time,
     "reflected-fraction": lambda state: 1.0 - state.absorbed_share,
+    "median-diameter": lambda state: np.maximum(state.median_diameter, TINY),
 }
 STRAY_WIDTH: dict[str, Callable[[Expected], Array]] = {
     "crater-depth": lambda state: np.hypot(state.crater_depth, state.exposures.pulses * state.depth_of_heat),
@@ -266,6 +268,14 @@ STRAY_WIDTH: dict[str, Callable[[Expected], Array]] = {
 # Kinds whose scatter is a share of the expectation, among those with linear residuals.
 RELATIVE_SCATTER = ("crater-depth", "crater-diameter", "bubble-radius", "reflected-fraction")
 
+
+def expected_of(state: Expected, kind: str, delay: Array | None) -> Array:
+    """Expected true value (n, draws) of a kind, at delays (n,) [s] where it is read at one."""
+    if delay is not None:
+        return state.radius_during(delay[:, None], state.motion)
+    return EXPECTED[kind](state)
+
+
 # Which inputs decide the expectation of a kind, beyond those that every kind shares.
 TOUCHES: dict[str, tuple[str, ...]] = {
     "crater-depth": ("removal_factor", "threshold_depth", "incubation_exponent"),
@@ -280,7 +290,13 @@ TOUCHES: dict[str, tuple[str, ...]] = {
         "probe_angle",
     ),
     "arrival-time": ("incubation_exponent", "standoff", "trigger_offset", "probe_angle"),
-    "median-diameter": ("fragment_factor", "melt_surface_tension", "melt_viscosity", "removal_factor", "threshold_depth"),
+    "median-diameter": (
+        "fragment_factor",
+        "melt_surface_tension",
+        "melt_viscosity",
+        "removal_factor",
+        "threshold_depth",
+    ),
     "reflected-fraction": (),
 }
 
@@ -290,21 +306,24 @@ _PITCH_POWER: dict[tuple[str, str], int] = {
     ("micrograph", "median-diameter"): 1,
     ("crater-map", "crater-diameter"): 1,
 }
+# How readings of sound follow the probe's sensitivity, and which are timed by the trigger.
+_VOLTAGE_POWER = {"pressure-integral": 2}
+_TIMED_BY_TRIGGER = ("arrival-time",)
 
 
 def reading_factor(kind: str, table: Table, conditions: Conditions, inputs: Inputs) -> Array:
     """Reading over true value, shape (draws,): the instruments' errors that all readings of a table share."""
-    factor = np.asarray(inputs.get(f"scale.{table.name}", np.ones(1)))
+    factor: Array = np.asarray(inputs.get(f"scale.{table.name}", np.ones(1)))
     power = _PITCH_POWER.get((table.kind, kind), 0)
     if power and table.name in conditions.pixel_pitch:
         factor = factor * (conditions.pixel_pitch[table.name] / inputs[f"pixel_pitch.{table.name}"]) ** power
-    if kind == "pressure-integral" and conditions.sensitivity is not None:
-        factor = factor * (inputs["probe_sensitivity"] / conditions.sensitivity) ** 2
+    if kind in _VOLTAGE_POWER and conditions.sensitivity is not None:
+        factor = factor * (inputs["probe_sensitivity"] / conditions.sensitivity) ** _VOLTAGE_POWER[kind]
     return factor
 
 
 def reading_offset(kind: str, conditions: Conditions, inputs: Inputs) -> Array:
     """Reading less true value [unit of the kind], shape (draws,): a late or early trigger."""
-    if kind == "arrival-time" and "trigger_offset" in inputs:
+    if kind in _TIMED_BY_TRIGGER and "trigger_offset" in inputs:
         return np.asarray(inputs["trigger_offset"] - conditions.trigger_offset)
     return np.zeros(1)

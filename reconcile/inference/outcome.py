@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, field
-from typing import TYPE_CHECKING, Literal
+from typing import TYPE_CHECKING, Literal, TypeAlias
 
 from reconcile.campaign.campaign import Prior
 from reconcile.campaign.inputs import Input
@@ -11,6 +11,9 @@ from reconcile.campaign.readings import Gathered, Reading, Shot
 
 if TYPE_CHECKING:
     import numpy as np
+
+ShotVerdict: TypeAlias = Literal["set-aside", "kept", "misread", "stray"]
+ReadingVerdict: TypeAlias = Literal["set-aside", "stray", "below-limit", "used", "information"]
 
 
 @dataclass(frozen=True, slots=True)
@@ -52,7 +55,7 @@ class ShotResult:
     energy_ratio: float
     energy_ratio_sd: float
     p_misread: float
-    verdict: Literal["set-aside", "kept", "misread", "stray"]
+    verdict: ShotVerdict
     reasons: tuple[str, ...]
 
 
@@ -64,7 +67,7 @@ class ReadingResult:
     predicted: float | None  # [unit of the kind]; None: not fitted
     predicted_sd: float | None  # of what such a reading should be, its own uncertainty left out
     p_stray: float | None
-    verdict: Literal["set-aside", "stray", "below-limit", "used", "information"]
+    verdict: ReadingVerdict
 
 
 @dataclass(frozen=True, slots=True)

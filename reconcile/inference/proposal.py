@@ -19,6 +19,11 @@ _SCORES = special.ndtri(_LEVELS)
 _LEAN = 2.0  # weight of the earlier covariance, in points per dimension
 
 
+def root_of(covariance: Array) -> Array:
+    """Lower Cholesky factor (k, k); raises LinAlgError where the matrix is not positive definite."""
+    return np.linalg.cholesky(covariance).astype(np.float64, copy=False)
+
+
 @dataclass(frozen=True, slots=True)
 class Warp:
     """x = location + scale · sinh((asinh z + skew) / tail), coordinate by coordinate; all (k,)."""
@@ -62,7 +67,7 @@ class Proposal:
     @classmethod
     def normal_like(cls, mean: Array, covariance: Array, freedom: float) -> Proposal:
         """Return an unwarped t about a mean with that scale matrix."""
-        return cls(Warp.none(len(mean)), mean, np.linalg.cholesky(covariance), freedom)
+        return cls(Warp.none(len(mean)), mean, root_of(covariance), freedom)
 
     @classmethod
     def fit(cls, points: Array, weights: Array, freedom: float, earlier: Array) -> Proposal:
@@ -77,7 +82,7 @@ class Proposal:
         _, before = _moments(warp, earlier, np.full(len(earlier), 1.0 / len(earlier)))
         lean = _LEAN * k / (_LEAN * k + effective)
         covariance = (1.0 - lean) * covariance + lean * before
-        return cls(warp, mean, np.linalg.cholesky(covariance + 1e-9 * np.eye(k)), freedom)
+        return cls(warp, mean, root_of(covariance + 1e-9 * np.eye(k)), freedom)
 
     def sample(self, rng: np.random.Generator, n: int) -> Array:
         """Return (n, k) draws."""

@@ -11,23 +11,30 @@ from concurrent.futures import Executor, ProcessPoolExecutor
 from contextlib import contextmanager
 from dataclasses import dataclass, replace
 from multiprocessing import get_context
-from typing import Any
+from typing import Any, Protocol
 
 import numpy as np
 
 from reconcile.campaign.progress import Progress
 from reconcile.inference.adapt import adapt
 from reconcile.inference.model import Array
-from reconcile.inference.problem import Problem
 from reconcile.inference.proposal import Mixture
-from reconcile.inference.start import Start
 
 ENSEMBLES = 4
 _BURN_IN = 10  # steps dropped: the walkers begin at weighted points of the adapted pool
 _STEPS = 20  # in a round
 MOST_ROUNDS = 40
 GOOD_RHAT = 1.01  # rank-normalised split R-hat: Vehtari et al., Bayesian Analysis 16 (2021) 667
-_INDEPENDENT = 0.85  # share of independence moves; the rest are differential-evolution moves, which need no good proposal
+_INDEPENDENT = (
+    0.85  # share of independence moves; the rest are differential-evolution moves, which need no good proposal
+)
+
+
+class Target(Protocol):
+    """A posterior that can be sampled; it must survive the way to a worker process."""
+
+    def log_prob(self, position: Array) -> Array:
+        """Log density, (n,), at (n, k); −inf outside the support."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -41,6 +48,14 @@ class Ensemble:
     log_prob: Array  # (steps, walkers)
     evaluations: int
     accepted: float  # share of accepted moves in the last round
+
+
+@dataclass(frozen=True, slots=True)
+class Memory:
+    """How a run that may be interrupted is kept."""
+
+    resumed: list[Ensemble] | None  # of an interrupted run; None: begin anew
+    keep: Callable[[list[Ensemble]], None]  # handed the ensembles after each round
 
 
 @dataclass(frozen=True, slots=True)
@@ -67,38 +82,38 @@ class Draws:
 
 
 def sample(
-    start: Start,
+    posterior: Target,
+    normal: tuple[Array, Array],
     seed: np.random.SeedSequence,
     *,
     target: int,
     workers: int,
     progress: Progress,
-    resumed: list[Ensemble] | None = None,
-    keep: Callable[[list[Ensemble]], None] | None = None,
+    memory: Memory | None = None,
 ) -> Draws:
     """Sample until the smallest effective sample size reaches `target` and the ensembles agree.
 
     Parameters
     ----------
-    start : where to begin
+    posterior : what to sample
+    normal : mode (k,) and covariance (k, k) of a normal approximation to begin with
     seed : source of every random number here; the draws do not depend on `workers`
     target : smallest bulk and tail effective sample size
     progress : told what is being done
-    resumed : ensembles of an interrupted run
-    keep : handed the ensembles after each round
+    memory : where the ensembles are kept between rounds; None: nowhere
     """
     seeds = seed.spawn(ENSEMBLES)
-    with _executor(min(workers, ENSEMBLES), start.problem) as run:
-        if resumed is None:
-            progress("adapting", 0, 0)
-            ensembles = run(_begin, [(start.mode, start.covariance, own) for own in seeds])
+    with _executor(min(workers, ENSEMBLES), posterior) as run:
+        if memory is not None and memory.resumed is not None:
+            ensembles = memory.resumed
         else:
-            ensembles = resumed
+            progress("adapting", 0, 0)
+            ensembles = run(_begin, [(*normal, own) for own in seeds])
         for _ in range(MOST_ROUNDS):
             quality = judge(ensembles)
             progress("sampling", int(min(quality.min_ess, target)), target)
-            if keep is not None:
-                keep(ensembles)
+            if memory is not None:
+                memory.keep(ensembles)
             if quality.enough(target):
                 break
             ensembles = run(_advance, [(ensemble, _STEPS) for ensemble in ensembles])
@@ -128,10 +143,10 @@ def judge(ensembles: list[Ensemble]) -> Quality:
     return Quality(float(np.min(sizes)), float(np.max(ratios)))
 
 
-def _begin(problem: Problem, mode: Array, covariance: Array, seed: np.random.SeedSequence) -> Ensemble:
+def _begin(posterior: Target, mode: Array, covariance: Array, seed: np.random.SeedSequence) -> Ensemble:
     """Adapt a proposal, set walkers on weighted points of its pool, and run the burn-in."""
     rng = np.random.default_rng(seed)
-    adapted = adapt(problem.log_prob, mode, covariance, rng)
+    adapted = adapt(posterior.log_prob, mode, covariance, rng)
     weights = np.exp(np.minimum(adapted.log_weights, np.sort(adapted.log_weights)[-10]))
     k = len(mode)
     walkers = 2 * max(k + 1, 24)
@@ -146,12 +161,12 @@ def _begin(problem: Problem, mode: Array, covariance: Array, seed: np.random.See
         adapted.evaluations,
         0.0,
     )
-    ensemble = _advance(problem, ensemble, _BURN_IN)
+    ensemble = _advance(posterior, ensemble, _BURN_IN)
     ensemble = replace(ensemble, chain=ensemble.chain[:0], log_prob=ensemble.log_prob[:0])
-    return _advance(problem, ensemble, _STEPS)
+    return _advance(posterior, ensemble, _STEPS)
 
 
-def _advance(problem: Problem, ensemble: Ensemble, steps: int) -> Ensemble:
+def _advance(posterior: Target, ensemble: Ensemble, steps: int) -> Ensemble:
     """Run an ensemble for some steps more."""
     import emcee
 
@@ -160,7 +175,7 @@ def _advance(problem: Problem, ensemble: Ensemble, steps: int) -> Ensemble:
         (independence_move(ensemble.proposal), _INDEPENDENT),
         (emcee.moves.DEMove(), 1.0 - _INDEPENDENT),
     ]
-    sampler = emcee.EnsembleSampler(walkers, k, problem.log_prob, moves=moves, vectorize=True)
+    sampler = emcee.EnsembleSampler(walkers, k, posterior.log_prob, moves=moves, vectorize=True)
     begin = emcee.State(ensemble.position, random_state=ensemble.random_state)
     end = sampler.run_mcmc(begin, steps, progress=False, skip_initial_state_check=True)
     return replace(
@@ -185,26 +200,24 @@ def independence_move(proposal: Mixture) -> Any:  # noqa: ANN401  # an emcee mov
     return emcee.moves.MHMove(propose)
 
 
-_PROBLEM: Problem | None = None  # of a worker process
+_HELD: list[Target] = []  # of a worker process, which gets its posterior once and not with every task
 
 
-def _hold(problem: Problem) -> None:
-    global _PROBLEM  # noqa: PLW0603  # a worker gets its problem once, not with every task
-    _PROBLEM = problem
+def _hold(posterior: Target) -> None:
+    _HELD[:] = [posterior]
 
 
 def _work(task: tuple[Callable[..., Ensemble], tuple[Any, ...]]) -> Ensemble:
     function, arguments = task
-    assert _PROBLEM is not None
-    return function(_PROBLEM, *arguments)
+    return function(_HELD[0], *arguments)
 
 
 @contextmanager
-def _executor(workers: int, problem: Problem) -> Iterator[Callable[..., list[Ensemble]]]:
+def _executor(workers: int, posterior: Target) -> Iterator[Callable[..., list[Ensemble]]]:
     """Give a way to run one function on several argument lists, in processes where there is more than one worker."""
     if workers <= 1:
-        yield lambda function, tasks: [function(problem, *arguments) for arguments in tasks]
+        yield lambda function, tasks: [function(posterior, *arguments) for arguments in tasks]
         return
     pool: Executor
-    with ProcessPoolExecutor(workers, get_context("spawn"), initializer=_hold, initargs=(problem,)) as pool:
+    with ProcessPoolExecutor(workers, get_context("spawn"), initializer=_hold, initargs=(posterior,)) as pool:
         yield lambda function, tasks: list(pool.map(_work, [(function, arguments) for arguments in tasks]))

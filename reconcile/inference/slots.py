@@ -16,6 +16,9 @@ from reconcile.inference.model import Array
 
 Index = NDArray[np.intp]
 
+_Sort = tuple[str, bool, tuple[int, ...]]  # kind, below a limit, table of each repeat
+_Member = tuple[int, float | None, tuple[int, ...]]  # target, delay, rows of the repeats
+
 
 @dataclass(frozen=True, slots=True)
 class Slot:
@@ -28,7 +31,7 @@ class Slot:
     censored: bool
     target: Index  # (c,) index of the shot or sample
     rows: Index  # (r, c) which reading
-    table: Index  # (r, c) which table it came from
+    tables: tuple[int, ...]  # (r,) which table each repeat of every cell came from
     value: Array  # (r, c) reading, or its limit where censored; in the logarithm for logarithmic kinds
     u: Array  # (r, c) on the same scale
     delay: Array | None  # (c,) [s]
@@ -52,31 +55,26 @@ def arrange(readings: Sequence[Reading], target_of: dict[str, int], table_of: di
             continue
         alone = -1 if reading.limit is None else row
         cells[reading.kind, target_of[name], reading.delay, alone].append(row)
-    waves: dict[tuple[str, bool, int, int], list[tuple[int, float | None, list[int]]]] = defaultdict(list)
-    seen: dict[tuple[str, bool, int, int], int] = defaultdict(int)
-    for (kind, target, delay, alone), rows in cells.items():
-        group = (kind, alone >= 0, len(rows), target)
-        waves[kind, alone >= 0, len(rows), seen[group]].append((target, delay, rows))
-        seen[group] += 1
-    return [_slot(kind, censored, members, readings, table_of) for (kind, censored, _, _), members in waves.items()]
+    waves: dict[tuple[_Sort, int], list[_Member]] = defaultdict(list)
+    seen: dict[tuple[_Sort, int], int] = defaultdict(int)
+    for (kind, target, delay, alone), unsorted in cells.items():
+        tables, rows = zip(*sorted((table_of[readings[row].table, kind], row) for row in unsorted), strict=True)
+        sort = (kind, alone >= 0, tables)
+        waves[sort, seen[sort, target]].append((target, delay, rows))
+        seen[sort, target] += 1
+    return [_slot(sort, members, readings) for (sort, _), members in waves.items()]
 
 
-def _slot(
-    kind: str,
-    censored: bool,
-    members: list[tuple[int, float | None, list[int]]],
-    readings: Sequence[Reading],
-    table_of: dict[tuple[str, str], int],
-) -> Slot:
+def _slot(sort: _Sort, members: list[_Member], readings: Sequence[Reading]) -> Slot:
+    kind, censored, tables = sort
     members = sorted(members, key=lambda member: member[0])
     rows = np.array([member[2] for member in members], dtype=np.intp).T
     value, u = np.empty(rows.shape), np.empty(rows.shape)
     for place, row in np.ndenumerate(rows):
-        value[place], u[place] = _on_scale(readings[row])
-    table = np.array([[table_of[readings[row].table, kind] for row in repeat] for repeat in rows], dtype=np.intp)
+        value[place], u[place] = _on_scale(readings[int(row)])
     delay = np.array([member[1] for member in members], dtype=float) if KINDS[kind].has_delay else None
     target = np.array([member[0] for member in members], dtype=np.intp)
-    return Slot(kind, censored, target, rows, table, value, u, delay)
+    return Slot(kind, censored, target, rows, tables, value, u, delay)
 
 
 def _on_scale(reading: Reading) -> tuple[float, float]:

@@ -11,8 +11,17 @@ from scipy import optimize, special
 from reconcile.campaign.kinds import KINDS
 from reconcile.inference.coordinates import Inputs
 from reconcile.inference.lattice import STEP, Lattice, full_points, kept_points
-from reconcile.inference.model import EXPECTED, RELATIVE_SCATTER, TINY, Array, Expected, reading_factor, reading_offset
+from reconcile.inference.model import (
+    RELATIVE_SCATTER,
+    TINY,
+    Array,
+    Expected,
+    expected_of,
+    reading_factor,
+    reading_offset,
+)
 from reconcile.inference.problem import Data, Problem
+from reconcile.inference.proposal import root_of
 
 # How far a start may lie from the mode of the prior, in its standard deviations, when a start is perturbed.
 _PERTURBED = 0.7
@@ -50,14 +59,16 @@ def find_start(data: Data, rng: np.random.Generator) -> Start:
     fits.sort(key=lambda fit: fit.cost)
     # The robust fit knows the place better than the shape: its lattice holds that place, the next one the shape as well.
     problem = on_lattice_of(rough, np.stack([fit.position for fit in fits[:2]]), 0.2 * fits[0].root, rng)
-    peaks = sorted((climb(problem.log_prob, fit.position, fit.root) for fit in fits[:2]), key=lambda peak: -peak.log_prob)
+    peaks = sorted(
+        (climb(problem.log_prob, fit.position, fit.root) for fit in fits[:2]), key=lambda peak: -peak.log_prob
+    )
     best = peaks[0]
     covariance = curvature(problem.log_prob, best.position, best.covariance)
     for _ in range(2):
-        problem = on_lattice_of(rough, best.position[None], np.linalg.cholesky(covariance), rng)
-        best = climb(problem.log_prob, best.position, np.linalg.cholesky(covariance))
+        problem = on_lattice_of(rough, best.position[None], root_of(covariance), rng)
+        best = climb(problem.log_prob, best.position, root_of(covariance))
         covariance = curvature(problem.log_prob, best.position, covariance)
-    white = np.linalg.inv(np.linalg.cholesky(covariance))
+    white = np.linalg.inv(root_of(covariance))
     others = tuple(
         (peak.log_prob, peak.position)
         for peak in peaks[1:]
@@ -101,8 +112,10 @@ def _robust_fit(problem: Problem, begin: Array, spread: Array) -> _Fit:
         return (moved[:, : len(step)] - moved[:, len(step) :]) / 2e-4
 
     found = optimize.least_squares(one, np.zeros(len(begin)), jac=jacobian, x_scale=1.0, max_nfev=60)
-    information = found.jac.T @ found.jac + 1e-4 * np.eye(len(begin))
-    root = spread[:, None] * np.linalg.cholesky(np.linalg.inv(information))
+    slopes = np.asarray(found.jac, dtype=np.float64)
+    information = slopes.T @ slopes + 1e-4 * np.eye(len(begin))
+    inverse = np.asarray(np.linalg.inv(information), dtype=np.float64)
+    root = spread[:, None] * root_of(inverse)
     return _Fit(float(found.cost), begin + spread * found.x, root)
 
 
@@ -128,14 +141,11 @@ def _reading_residuals(data: Data, inputs: Inputs) -> list[Array]:
         if slot.censored:
             continue
         state = Expected(data.conditions, inputs, data.table.exposures(slot.target, 0.0))
-        if slot.delay is None:
-            expected = EXPECTED[slot.kind](state)
-        else:
-            expected = state.radius_during(slot.delay[:, None], state.motion)
+        expected = expected_of(state, slot.kind, slot.delay)
         scatter = inputs[f"scatter.{slot.kind}"]
         reach = expected if slot.kind in RELATIVE_SCATTER else 1.0
         for repeat in range(len(slot.rows)):
-            table = data.likelihood.tables[slot.table[repeat, 0]]
+            table = data.likelihood.tables[slot.tables[repeat]]
             factor = reading_factor(slot.kind, table, data.conditions, inputs)
             seen = expected * factor + reading_offset(slot.kind, data.conditions, inputs)
             value, u = slot.value[repeat][:, None], slot.u[repeat][:, None]
@@ -184,7 +194,9 @@ def climb(log_prob: Callable[[Array], Array], begin: Array, root: Array) -> Peak
         slope = (values[1 : k + 1] - values[k + 1 :]) / (2.0 * width)
         return float(values[0]), np.clip(slope, -1e4, 1e4)
 
-    found = optimize.minimize(value_and_slope, np.zeros(k), jac=True, method="BFGS", options={"gtol": 0.02, "maxiter": 150})
+    found = optimize.minimize(
+        value_and_slope, np.zeros(k), jac=True, method="BFGS", options={"gtol": 0.02, "maxiter": 150}
+    )
     return Peak(-float(found.fun), begin + root @ found.x, root @ found.hess_inv @ root.T)
 
 
@@ -200,7 +212,7 @@ def curvature(log_prob: Callable[[Array], Array], mode: Array, covariance: Array
     steps = np.concatenate([axes, axes[first] + axes[second]])
     steps = width * np.concatenate([np.zeros((1, k)), steps, -steps])
     for _ in range(_MOST_PASSES):
-        root = np.linalg.cholesky(covariance)
+        root = root_of(covariance)
         drop = -log_prob(mode + steps @ root.T)
         drop = np.minimum(np.where(np.isfinite(drop), drop, _IMPOSSIBLE) - drop[0], 60.0)
         half = (len(steps) - 1) // 2

@@ -15,7 +15,7 @@ from reconcile.inference.fit import Fitted
 from reconcile.inference.lattice import STEP
 from reconcile.inference.likelihood import MISREAD_SPREAD
 from reconcile.inference.model import Array, Expected
-from reconcile.inference.outcome import ReadingResult, ShotResult
+from reconcile.inference.outcome import ReadingResult, ReadingVerdict, ShotResult, ShotVerdict
 from reconcile.inference.posterior import summary
 from reconcile.inference.problem import chosen_draws
 
@@ -109,11 +109,12 @@ def _reading_results(fitted: Fitted, gathered: Gathered, looked: _Looked) -> tup
     for row, reading in enumerate(gathered.readings):
         position = position_of.get(row)
         if position is None:
-            verdict = "set-aside" if reading.set_aside is not None else "information"
-            results.append(ReadingResult(reading, None, None, None, verdict))
+            aside = reading.set_aside is not None
+            results.append(ReadingResult(reading, None, None, None, "set-aside" if aside else "information"))
             continue
         p_stray = float(np.clip(looked.stray[position], 0.0, 1.0))
-        verdict = "stray" if p_stray > SUSPECT else "below-limit" if reading.limit is not None else "used"
+        sound: ReadingVerdict = "below-limit" if reading.limit is not None else "used"
+        verdict: ReadingVerdict = "stray" if p_stray > SUSPECT else sound
         predicted, sd = float(looked.mean[position]), float(looked.sd[position])
         results.append(ReadingResult(reading, predicted, sd, p_stray, verdict))
     return tuple(results)
@@ -151,7 +152,9 @@ def _shot_results(
     return tuple(results)
 
 
-def _verdict(shot: Shot, own: list[ReadingResult], p_misread: float, ratio: Array) -> tuple[str, tuple[str, ...]]:
+def _verdict(
+    shot: Shot, own: list[ReadingResult], p_misread: float, ratio: Array
+) -> tuple[ShotVerdict, tuple[str, ...]]:
     """Return a shot's verdict and the reasons for it, the most telling first."""
     stray = [result for result in own if result.verdict == "stray"]
     reasons = []
@@ -206,4 +209,3 @@ def _stray_reason(result: ReadingResult, count: int) -> str:
 def _listed(words: Iterable[str]) -> str:
     words = list(words)
     return words[0] if len(words) == 1 else f"{', '.join(words[:-1])} and {words[-1]}"
-
