@@ -16,7 +16,7 @@ from reconcile.inference.proposal import Mixture, Proposal
 
 ROUND = 1000  # points a round
 MOST_ROUNDS = 14
-_DEFENCE = 0.07  # share of the defensive component
+_DEFENCE = 0.06  # share of each defensive component
 _FREEDOM, _DEFENCE_FREEDOM = 12.0, 8.0
 _CLIPPED = 10  # weights are clipped at the so-many-th largest
 _ENOUGH_PER_DIMENSION = 6.0  # effective points below which weights are tempered
@@ -39,40 +39,51 @@ class Adapted:
         return _effective(self.log_weights)
 
 
-def adapt(log_prob: Callable[[Array], Array], mode: Array, covariance: Array, rng: np.random.Generator) -> Adapted:
+@dataclass(frozen=True, slots=True)
+class Begin:
+    """What is known of a posterior before it is sampled: its mode with the shape there, and how far it can reach."""
+
+    mode: Array  # (k,)
+    covariance: Array  # (k, k)
+    reach: tuple[Array, Array] | None = None  # mean and covariance of the priors; None: not known
+
+
+def adapt(log_prob: Callable[[Array], Array], begin: Begin, rng: np.random.Generator) -> Adapted:
     """Fit a proposal to a posterior.
 
     Parameters
     ----------
     log_prob : (n, k) → (n,)
-    mode, covariance : normal approximation to begin with
+    begin : its normal approximation; where the readings say little, the priors show how far the posterior reaches
     """
-    k = len(mode)
-    defence = Proposal.normal_like(mode, 1.3 * covariance, _DEFENCE_FREEDOM)
-    proposals: list[Mixture] = [
-        Mixture(Proposal.normal_like(mode, 1.2 * covariance, _DEFENCE_FREEDOM), defence, _DEFENCE)
-    ]
+    k = len(begin.mode)
+    first = Proposal.normal_like(begin.mode, 1.2 * begin.covariance, _DEFENCE_FREEDOM)
+    defences = [Proposal.normal_like(begin.mode, 1.3 * begin.covariance, _DEFENCE_FREEDOM)]
+    if begin.reach is not None:
+        defences.append(Proposal.normal_like(*begin.reach, _DEFENCE_FREEDOM))
+    shares = (1.0 - _DEFENCE * len(defences), *(_DEFENCE for _ in defences))
+    proposals = [Mixture((first, *defences), shares)]
     points = np.empty((0, k))
     values = np.empty(0)
     densities = np.empty((0, 0))
-    shares: list[float] = []
+    worth: list[float] = []
     for _ in range(MOST_ROUNDS):
         fresh = proposals[-1].sample(rng, ROUND)
         points, values = np.concatenate([points, fresh]), np.concatenate([values, log_prob(fresh)])
         rows = [densities, *()] if len(densities) else []
-        old = np.concatenate([*rows, [proposals[-1].log_pdf(points[: len(points) - ROUND])]]) if len(shares) else None
+        old = np.concatenate([*rows, [proposals[-1].log_pdf(points[: len(points) - ROUND])]]) if worth else None
         new = np.stack([proposal.log_pdf(fresh) for proposal in proposals])
         densities = new if old is None else np.concatenate([old, new], axis=1)
         log_mixture = np.logaddexp.reduce(densities, axis=0) - np.log(len(proposals))
         log_weights = values - log_mixture
         log_weights -= log_weights.max()
-        shares.append(_effective(log_weights) / len(points))
+        worth.append(_effective(log_weights) / len(points))
         weights = _tempered(log_weights, _ENOUGH_PER_DIMENSION * k)
-        earlier = proposals[-1].main.sample(rng, 40 * k)
+        earlier = proposals[-1].parts[0].sample(rng, 40 * k)
         main = Proposal.fit(points, weights, _FREEDOM, earlier)
-        proposals.append(Mixture(main, defence, _DEFENCE))
+        proposals.append(Mixture((main, *defences), shares))
         enough = _effective(log_weights) > 2 * _ENOUGH_PER_DIMENSION * k
-        if len(shares) >= 4 and enough and max(shares[-1], shares[-2]) < _STEADY * shares[-3]:
+        if len(worth) >= 4 and enough and max(worth[-1], worth[-2]) < _STEADY * worth[-3]:
             break
     return Adapted(proposals[-1], points, log_weights, values, len(points))
 

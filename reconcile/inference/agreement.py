@@ -22,7 +22,6 @@ from reconcile.inference.start import Start, climb, curvature, on_lattice_of
 # the prior's: a side that knows nothing brings 1 by itself.
 _KNOWN = 0.5
 SUSPECT = 0.01  # p-value, shared by the kinds that were tested
-_PRIOR_DRAWS = 4000
 
 
 @dataclass(frozen=True, slots=True)
@@ -46,7 +45,7 @@ def agreement(start: Start, counts: dict[str, int], rng: np.random.Generator) ->
     compared = [
         n for n, name in enumerate(problem.names) if not name.startswith(("scatter.", "energy_", "stray_", "misread_"))
     ]
-    metric = _prior_covariance(problem, rng)[np.ix_(compared, compared)]
+    metric = start.reach[1][np.ix_(compared, compared)]
     values = {kind: _split(start, kind, compared, metric, rng) if len(kinds) > 1 else None for kind in kinds}
     tested = sum(value is not None for value in values.values())
     results = []
@@ -96,10 +95,3 @@ def _side(start: Start, kind: str, compared: list[int], rng: np.random.Generator
     peak = climb(part.log_prob, start.mode, root)
     covariance = curvature(part.log_prob, peak.position, peak.covariance)
     return _Side(peak.position[compared], covariance[np.ix_(compared, compared)])
-
-
-def _prior_covariance(problem: Problem, rng: np.random.Generator) -> Array:
-    """Covariance (k, k) of the sampled coordinates under the priors."""
-    believed = problem.data.believed
-    draws = {name: believed[name].density.sample(rng, _PRIOR_DRAWS) for name in problem.names}
-    return np.atleast_2d(np.cov(problem.coordinates.position(draws).T))

@@ -32,6 +32,7 @@ class Stored:
     mode: Array
     covariance: Array
     log_prob: float
+    reach: tuple[Array, Array]  # mean and covariance of the priors on the coordinates
     late: tuple[int, ...]  # rows of radii left out as read after the collapse
     points: dict[int, Index] | None  # of the lattice, by shot; None: no reading belongs to a shot
     ensembles: list[Ensemble]
@@ -106,6 +107,8 @@ def _packed(stored: Stored) -> dict[str, Any]:
     arrays: dict[str, Any] = {
         "mode": stored.mode,
         "covariance": stored.covariance,
+        "reach_mean": stored.reach[0],
+        "reach_covariance": stored.reach[1],
         "log_prob_at_mode": np.array(stored.log_prob),
         "late": np.array(stored.late, dtype=np.intp),
         "ensembles": np.array(len(stored.ensembles)),
@@ -115,16 +118,14 @@ def _packed(stored: Stored) -> dict[str, Any]:
         arrays |= {f"points{shot}": points for shot, points in stored.points.items()}
     for number, ensemble in enumerate(stored.ensembles):
         arrays |= {f"e{number}.{name}": getattr(ensemble, name) for name in _ENSEMBLE_ARRAYS}
-        kind, keys, place, has_gauss, gauss = ensemble.random_state
+        kind, keys, at, has_gauss, gauss = ensemble.random_state
         arrays[f"e{number}.keys"] = keys
-        arrays[f"e{number}.state"] = np.array([place, has_gauss], dtype=np.int64)
+        arrays[f"e{number}.state"] = np.array([at, has_gauss], dtype=np.int64)
         arrays[f"e{number}.numbers"] = np.array([gauss, ensemble.accepted, float(ensemble.evaluations)])
         arrays[f"e{number}.generator"] = np.array(kind)
-        mixture = ensemble.proposal
-        arrays[f"e{number}.share"] = np.array(mixture.share)
-        for part in ("main", "defence"):
-            proposal: Proposal = getattr(mixture, part)
-            arrays |= dict(_packed_proposal(f"e{number}.{part}", proposal))
+        arrays[f"e{number}.shares"] = np.array(ensemble.proposal.shares)
+        for place, part in enumerate(ensemble.proposal.parts):
+            arrays |= dict(_packed_proposal(f"e{number}.part{place}", part))
     return arrays
 
 
@@ -142,15 +143,18 @@ def _unpacked(arrays: dict[str, Any]) -> Stored:
         points = {int(shot): arrays[f"points{shot}"] for shot in arrays["shots"]}
     ensembles = []
     for number in range(int(arrays["ensembles"])):
-        proposals = [_unpacked_proposal(f"e{number}.{part}", arrays) for part in ("main", "defence")]
-        place, has_gauss = (int(value) for value in arrays[f"e{number}.state"])
+        shares = tuple(float(share) for share in arrays[f"e{number}.shares"])
+        parts = tuple(_unpacked_proposal(f"e{number}.part{place}", arrays) for place in range(len(shares)))
+        at, has_gauss = (int(value) for value in arrays[f"e{number}.state"])
         gauss, accepted, evaluations = (float(value) for value in arrays[f"e{number}.numbers"])
-        state = (str(arrays[f"e{number}.generator"]), arrays[f"e{number}.keys"], place, has_gauss, gauss)
+        state = (str(arrays[f"e{number}.generator"]), arrays[f"e{number}.keys"], at, has_gauss, gauss)
         position, chain, log_prob = (arrays[f"e{number}.{name}"] for name in _ENSEMBLE_ARRAYS)
-        mixture = Mixture(proposals[0], proposals[1], float(arrays[f"e{number}.share"]))
-        ensembles.append(Ensemble(mixture, position, state, chain, log_prob, int(evaluations), accepted))
+        ensembles.append(Ensemble(Mixture(parts, shares), position, state, chain, log_prob, int(evaluations), accepted))
     late = tuple(int(row) for row in arrays["late"])
-    return Stored(arrays["mode"], arrays["covariance"], float(arrays["log_prob_at_mode"]), late, points, ensembles)
+    reach = arrays["reach_mean"], arrays["reach_covariance"]
+    return Stored(
+        arrays["mode"], arrays["covariance"], float(arrays["log_prob_at_mode"]), reach, late, points, ensembles
+    )
 
 
 def _unpacked_proposal(prefix: str, arrays: dict[str, Any]) -> Proposal:

@@ -113,7 +113,7 @@ def _could_not_tell(
     if fixed:
         sentences.append(f"Held fixed, because each nearly repeats another input: {', '.join(fixed)}.")
     shares = [share for share in budget.get("absorbed_fraction", ()) if share.source != "readings"][:3]
-    if shares:
+    if shares and "reflected-fraction" not in fitted.problem.data.kinds:
         listed = ", ".join(f"{share.source} ({100 * share.share:.0f} %)" for share in shares)
         sentences.append(
             "Craters, bubbles, sound and sizes see only ratios of energies: scaling the absorbed fraction up and the "

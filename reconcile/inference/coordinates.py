@@ -74,6 +74,19 @@ class Anchor:
     upper: float  # 70 % quantile of the log: above threshold in an ordinary campaign
 
 
+# Far outside the support, where a search or a proposal may look, slopes are held off zero; the prior is nil there.
+_FLATTEST, _STEEPEST = 0.05, 0.95
+
+
+# Added to levels, so that one whose energy lies below threshold leaves its input alone: [m] and [Pa² s].
+_FAINT_CRATER, _FAINT_SOUND = 5e-9, 0.1
+
+
+def _rise(known: Inputs) -> Array:
+    """How absorbed fluence rises with energy, as a power."""
+    return np.maximum(1.0 + known["absorption_exponent"], _FLATTEST)
+
+
 class Coordinates:
     """The way between sampled coordinates and inputs.
 
@@ -154,7 +167,7 @@ class Coordinates:
         straight = np.ones(1), np.zeros(1)
         if "absorption_exponent" not in known:
             return straight
-        slope = 1.0 + known["absorption_exponent"]
+        slope = _rise(known)
         leaning = {
             "spot_radius": (np.ones(1), 0.5 * np.log(slope)),  # D² rises by 2 w² (1 + p)
             "heated_depth_exponent": (slope, np.zeros(1)),
@@ -166,7 +179,7 @@ class Coordinates:
         log_absorbed = self._log_absorbed(known)
         if name == "absorbed_fraction":
             return np.ones(1), log_absorbed
-        exponent = known["heated_depth_exponent"]
+        exponent = np.minimum(known["heated_depth_exponent"], _STEEPEST)
         relative = log_absorbed - math.log(REFERENCE_ABSORBED)
         if name == "heated_depth":
             return np.ones(1), exponent * relative
@@ -178,7 +191,7 @@ class Coordinates:
         # ln(energy/threshold energy), with threshold^(1 − a) = energy density × depth × reference^(−a)
         scale = 1.0 / (1.0 - exponent)
         rest = np.log(known["heated_depth"]) - exponent * math.log(REFERENCE_ABSORBED)
-        rise = 1.0 + known["absorption_exponent"]
+        rise = _rise(known)
         return -scale / rise, (log_absorbed - scale * rest) / rise
 
     def _log_absorbed(self, known: Inputs) -> Array:
@@ -199,9 +212,9 @@ class Coordinates:
         exposures = Exposures(upper, np.ones((1, 1)), np.array([[conditions.spot_radius]]), np.array([[standoff]]))
         state = Expected(conditions, {**known, name: reference}, exposures)
         level: Callable[[], Array] = {
-            "removal_factor": lambda: np.log(np.maximum(state.crater_depth, TINY)),
+            "removal_factor": lambda: np.log(np.maximum(state.crater_depth, 0.0) + _FAINT_CRATER),
             "fragment_factor": lambda: np.log(np.maximum(state.median_diameter, TINY)),
-            "shock_factor": lambda: np.log(np.maximum(state.pressure_integral, TINY)) + self._log_gain(known),
+            "shock_factor": lambda: np.log(state.pressure_integral + _FAINT_SOUND) + self._log_gain(known),
             "standoff": lambda: self._arrival(state, known) * conditions.fluid.sound_speed / reference,
         }[name]
         return np.asarray(level()[0] - (0.0 if name == "standoff" else np.log(reference)))

@@ -9,6 +9,7 @@ import numpy as np
 
 from reconcile.campaign.progress import Progress
 from reconcile.campaign.readings import Gathered
+from reconcile.inference.adapt import Begin
 from reconcile.inference.checkpoint import Checkpoint, Stored
 from reconcile.inference.coordinates import Inputs
 from reconcile.inference.lattice import STEP, Lattice, full_points
@@ -78,14 +79,16 @@ def fit(
     points = None if lattice is None else lattice.points()
     draws = sample(
         start.problem,
-        (start.mode, start.covariance),
+        Begin(start.mode, start.covariance, start.reach),
         for_sampling,
         target=target,
         workers=workers,
         progress=progress,
         memory=Memory(
             None if stored is None else stored.ensembles,
-            lambda now: checkpoint.save(Stored(start.mode, start.covariance, start.log_prob, late, points, now)),
+            lambda now: checkpoint.save(
+                Stored(start.mode, start.covariance, start.log_prob, start.reach, late, points, now)
+            ),
         ),
     )
     thin = max(1, -(-draws.log_prob.size // MOST_STORED))
@@ -109,7 +112,7 @@ def _taken_up(data: Data, stored: Stored) -> Start:
     """Return the start of an interrupted fit."""
     data = data.leave_out(stored.late)
     problem = Problem(data, None if stored.points is None else Lattice.of(data.table, stored.points, STEP))
-    return Start(problem, stored.mode, stored.covariance, stored.log_prob, ())
+    return Start(problem, stored.mode, stored.covariance, stored.log_prob, stored.reach, ())
 
 
 def every_input(problem: Problem, position: Array, rng: np.random.Generator) -> Inputs:

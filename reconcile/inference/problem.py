@@ -155,7 +155,10 @@ class Problem:
     def log_prior(self, position: Array) -> tuple[Array, Inputs]:
         """Log prior with its physical cuts, (draws,), on the coordinates (draws, k); and the inputs there."""
         inputs, log_prior = self.coordinates.inputs(position)
-        return log_prior + self._log_cuts(inputs), inputs
+        possible = np.flatnonzero(np.isfinite(log_prior))
+        if len(possible):
+            log_prior[possible] += self._log_cuts(chosen_draws(inputs, possible))
+        return log_prior, inputs
 
     def log_prob(self, position: Array) -> Array:
         """Log posterior, (draws,), of coordinates (draws, k); −inf outside the support."""

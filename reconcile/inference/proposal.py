@@ -102,22 +102,21 @@ class Proposal:
 
 @dataclass(frozen=True, slots=True)
 class Mixture:
-    """A proposal with a defensive second one, so that no region is left without mass."""
+    """A fitted proposal, and defensive ones beside it so that no region is left without mass."""
 
-    main: Proposal
-    defence: Proposal
-    share: float  # of the defence
+    parts: tuple[Proposal, ...]  # the fitted one first
+    shares: tuple[float, ...]  # of each; they add up to 1
 
     def sample(self, rng: np.random.Generator, n: int) -> Array:
         """Return (n, k) draws."""
-        defended = rng.uniform(size=n) < self.share
-        draws = self.main.sample(rng, n)
-        return np.where(defended[:, None], self.defence.sample(rng, n), draws)
+        chosen = np.searchsorted(np.cumsum(self.shares)[:-1], rng.uniform(size=n))
+        drawn = np.stack([part.sample(rng, n) for part in self.parts])
+        return drawn[chosen, np.arange(n)]
 
     def log_pdf(self, x: Array) -> Array:
         """Log density, (n,), at (n, k)."""
-        main = self.main.log_pdf(x) + math.log1p(-self.share)
-        return np.logaddexp(main, self.defence.log_pdf(x) + math.log(self.share))
+        logs = [part.log_pdf(x) + math.log(share) for part, share in zip(self.parts, self.shares, strict=True)]
+        return np.asarray(np.logaddexp.reduce(logs, axis=0))
 
 
 def _moments(warp: Warp, points: Array, weights: Array) -> tuple[Array, Array]:

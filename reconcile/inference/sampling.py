@@ -16,7 +16,7 @@ from typing import Any, Protocol
 import numpy as np
 
 from reconcile.campaign.progress import Progress
-from reconcile.inference.adapt import adapt
+from reconcile.inference.adapt import Begin, adapt
 from reconcile.inference.model import Array
 from reconcile.inference.proposal import Mixture
 
@@ -83,7 +83,7 @@ class Draws:
 
 def sample(
     posterior: Target,
-    normal: tuple[Array, Array],
+    begin: Begin,
     seed: np.random.SeedSequence,
     *,
     target: int,
@@ -96,7 +96,7 @@ def sample(
     Parameters
     ----------
     posterior : what to sample
-    normal : mode (k,) and covariance (k, k) of a normal approximation to begin with
+    begin : its normal approximation
     seed : source of every random number here; the draws do not depend on `workers`
     target : smallest bulk and tail effective sample size
     progress : told what is being done
@@ -108,7 +108,7 @@ def sample(
             ensembles = memory.resumed
         else:
             progress("adapting", 0, 0)
-            ensembles = run(_begin, [(*normal, own) for own in seeds])
+            ensembles = run(_begin, [(begin, own) for own in seeds])
         for _ in range(MOST_ROUNDS):
             quality = judge(ensembles)
             progress("sampling", int(min(quality.min_ess, target)), target)
@@ -143,12 +143,12 @@ def judge(ensembles: list[Ensemble]) -> Quality:
     return Quality(float(np.min(sizes)), float(np.max(ratios)))
 
 
-def _begin(posterior: Target, mode: Array, covariance: Array, seed: np.random.SeedSequence) -> Ensemble:
+def _begin(posterior: Target, begin: Begin, seed: np.random.SeedSequence) -> Ensemble:
     """Adapt a proposal, set walkers on weighted points of its pool, and run the burn-in."""
     rng = np.random.default_rng(seed)
-    adapted = adapt(posterior.log_prob, mode, covariance, rng)
+    adapted = adapt(posterior.log_prob, begin, rng)
     weights = np.exp(np.minimum(adapted.log_weights, np.sort(adapted.log_weights)[-10]))
-    k = len(mode)
+    k = len(begin.mode)
     walkers = 2 * max(k + 1, 24)
     chosen = rng.choice(len(weights), size=walkers, replace=False, p=weights / weights.sum())
     generator = np.random.RandomState(np.random.MT19937(seed.spawn(1)[0]))

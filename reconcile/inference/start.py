@@ -28,6 +28,7 @@ _PERTURBED = 0.7
 _PERTURBED_STARTS = 3
 _IMPOSSIBLE = 1e9  # stands for minus the log of zero, so that a search turns back
 _FLOOR, _NEIGHBOURS = 1e-7, 4  # share of a shot's peak below which a lattice point is dropped
+_PRIOR_DRAWS = 4000
 _PROBES = 16  # draws that decide which lattice points matter
 _MOST_PASSES, _WHITE_ENOUGH = 8, 0.3  # of the curvature, and the departure from the identity at which it stops
 
@@ -40,6 +41,7 @@ class Start:
     mode: Array  # (k,)
     covariance: Array  # (k, k)
     log_prob: float  # at the mode
+    reach: tuple[Array, Array]  # mean and covariance of the coordinates under the priors
     others: tuple[tuple[float, Array], ...]  # log_prob and mode of starts that ended elsewhere
 
 
@@ -50,7 +52,8 @@ def find_start(data: Data, rng: np.random.Generator) -> Start:
     """
     rough = Problem(data)
     begin = _prior_median(rough)
-    spread = _prior_spread(rough, rng)
+    reach = prior_reach(rough, rng)
+    spread = np.sqrt(np.diag(reach[1]))
     fits = [_robust_fit(rough, begin, spread)]
     for _ in range(_PERTURBED_STARTS):
         shifted = begin + _PERTURBED * spread * rng.standard_normal(len(begin))
@@ -74,7 +77,7 @@ def find_start(data: Data, rng: np.random.Generator) -> Start:
         for peak in peaks[1:]
         if best.log_prob - peak.log_prob < 12.0 and np.abs(white @ (peak.position - best.position)).max() > 1.0
     )
-    return Start(problem, best.position, covariance, best.log_prob, others)
+    return Start(problem, best.position, covariance, best.log_prob, reach, others)
 
 
 @dataclass(frozen=True, slots=True)
@@ -92,11 +95,12 @@ def _prior_median(problem: Problem) -> Array:
     return problem.coordinates.position(medians)[0]
 
 
-def _prior_spread(problem: Problem, rng: np.random.Generator) -> Array:
-    """Standard deviation of each coordinate under the priors, (k,)."""
+def prior_reach(problem: Problem, rng: np.random.Generator) -> tuple[Array, Array]:
+    """Mean (k,) and covariance (k, k) of the coordinates under the priors, from draws."""
     believed = problem.data.believed
-    draws = {name: believed[name].density.sample(rng, 400) for name in problem.names}
-    return problem.coordinates.position(draws).std(axis=0)
+    draws = {name: believed[name].density.sample(rng, _PRIOR_DRAWS) for name in problem.names}
+    position = problem.coordinates.position(draws)
+    return position.mean(axis=0), np.atleast_2d(np.cov(position.T))
 
 
 def _robust_fit(problem: Problem, begin: Array, spread: Array) -> _Fit:
