@@ -6,11 +6,14 @@ import sys
 from pathlib import Path
 
 import pytest
+from openpyxl import Workbook
 
 from reconcile.campaign.inputs import INPUTS
 from reconcile.campaign.kinds import KINDS, TABLE_KINDS
+from reconcile.campaign.manifest import load
 from reconcile.campaign.materials import PROPERTY_NAMES, known_liquids, known_materials
 from reconcile.cli import VERBS, main
+from reconcile.gather import gather
 
 README = (Path(__file__).parents[1] / "README.md").read_text(encoding="utf-8")
 HEAVY = {"numpy", "pandas", "scipy", "matplotlib", "emcee", "openpyxl", "h5py", "xlsxwriter", "jinja2", "typst", "tqdm"}
@@ -83,3 +86,25 @@ def test_the_readme_gives_its_two_commands_for_every_system(mark):
     words = [word for word in block.split() if word in ("closeout", "example_campaign", "pytest", "-n", "--quiet")]
     assert words  # the same work is done on Windows
     assert [word for word in windows.split() if word in words] == words
+
+
+def test_the_campaign_that_the_readme_shows_is_taken_as_it_stands(tmp_path):
+    manifest = README.split("```toml\n", 1)[1].split("\n```", 1)[0]
+    (tmp_path / "campaign.toml").write_text(manifest, encoding="utf-8")
+    shots = [[f"s{number}", 5 + number, 1] for number in range(20)]
+    depths = [[f"s{number}", 0.1 + 0.02 * number, 0.01] for number in range(20)]
+    write_workbook(tmp_path / "shots.xlsx", "log", [["Shot", "Energy (uJ)", "Pulses"], *shots])
+    write_workbook(tmp_path / "craters.xlsx", "profiler", [["Shot", "Depth (um)", "u (um)"], *depths])
+    (tmp_path / "radii.csv").write_text("Shot,Delay (us),Radius (um),u (um)\ns3,4.0,80,2\n", encoding="utf-8")
+    gathered = gather(load(tmp_path))
+    assert len(gathered.shots) == 20
+    assert len(gathered.readings) == 21
+    assert gathered.refused == ()
+
+
+def write_workbook(path, sheet, rows):
+    workbook = Workbook()
+    workbook.active.title = sheet
+    for row in rows:
+        workbook.active.append(row)
+    workbook.save(path)
