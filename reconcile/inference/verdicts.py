@@ -58,6 +58,13 @@ def judge(fitted: Fitted, gathered: Gathered, rng: np.random.Generator) -> Judge
     return Judged(_shot_results(fitted, gathered, looked, readings), readings)
 
 
+def absorbed_draws(fitted: Fitted, rng: np.random.Generator) -> Array:
+    """Draws of every shot's absorbed fluence [J/m²], (shots, draws), the shots of one column under one draw of inputs."""
+    looked, data = _look(fitted, rng), fitted.problem.data
+    shots = np.arange(len(data.table.log_energy))
+    return Expected(data.conditions, looked.inputs, data.table.exposures(shots, looked.deviation)).absorbed
+
+
 def _look(fitted: Fitted, rng: np.random.Generator) -> _Looked:
     """Work through some draws: deviations, probabilities, expectations."""
     problem = fitted.problem
