@@ -3,7 +3,9 @@
 from __future__ import annotations
 
 import re
+import unicodedata
 from collections.abc import Iterable, Iterator
+from functools import cache
 from pathlib import Path, PurePosixPath
 
 from reconcile.campaign.quantity import UnknownUnit, parse_unit
@@ -105,9 +107,76 @@ def matching(folder: Path, pattern: str) -> list[str]:
 
     Case counts, as the pattern is written. No pattern looks into an output folder.
     """
-    expression = re.compile("".join(_piece(part) for part in re.split(r"(\{[^{}]*\}|\*+|\?)", pattern)))
+    expression = re.compile("".join(_piece(part) for part in _parts(pattern)))
     names = (path.relative_to(folder).as_posix() for path in files_below(folder))
-    return [name for name in names if expression.fullmatch(name)]
+    return [name for name in names if expression.fullmatch(composed(name))]
+
+
+def composed(name: str) -> str:
+    """Return a name with each accented letter as one character: some systems store such letters in two."""
+    return unicodedata.normalize("NFC", name)
+
+
+def delay_unit(pattern: str) -> str | None:
+    """Return the unit behind {delay}; None where the pattern has no delay."""
+    match = _DELAY_UNIT.search(pattern)
+    return match.group(1) if match else None
+
+
+def fields_of(pattern: str) -> tuple[str, ...]:
+    """Return the names of the fields of a pattern, in its order."""
+    return tuple(_FIELD.findall(pattern))
+
+
+def ways(pattern: str, name: str, most: int = 1000) -> list[dict[str, str]]:
+    """Return the ways to read a name by a pattern: what each {field} stands for; empty where it does not match.
+
+    Shorter text for earlier fields comes first; no more than `most` ways are returned.
+    """
+    parts, text = _parts(pattern), composed(name)
+    found: dict[tuple[tuple[str, str], ...], None] = {}
+
+    @cache
+    def fits(number: int, at: int) -> bool:
+        return (
+            at == len(text)
+            if number == len(parts)
+            else any(fits(number + 1, end) for end in _ends(parts[number], text, at))
+        )
+
+    def walk(number: int, at: int, taken: tuple[tuple[str, str], ...]) -> None:
+        if len(found) >= most:
+            return
+        if not any(_FIELD.match(part) for part in parts[number:]):
+            found.setdefault(taken)
+            return
+        part = parts[number]
+        for end in _ends(part, text, at):
+            if fits(number + 1, end):
+                walk(number + 1, end, (*taken, (part[1:-1], text[at:end])) if _FIELD.match(part) else taken)
+
+    if fits(0, 0):
+        walk(0, 0, ())
+    return [dict(taken) for taken in found]
+
+
+def _ends(part: str, text: str, at: int) -> Iterable[int]:
+    """Return where one part of a pattern can end that begins at a place of the text."""
+    if part.startswith("**"):
+        return range(at, len(text) + 1)
+    slash = text.find("/", at)
+    last = len(text) if slash < 0 else slash
+    if part == "?":
+        return range(at + 1, min(at + 1, last) + 1)
+    if part == "*":
+        return range(at, last + 1)
+    if _FIELD.match(part):
+        return range(at + 1, last + 1)
+    return (at + len(part),) if text.startswith(part, at) else ()
+
+
+def _parts(pattern: str) -> list[str]:
+    return [part for part in re.split(r"(\{[^{}]*\}|\*+|\?)", composed(pattern)) if part]
 
 
 def _piece(part: str) -> str:

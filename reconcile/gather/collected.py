@@ -9,7 +9,7 @@ from pathlib import Path
 
 from reconcile.campaign.campaign import Campaign, Table
 from reconcile.campaign.files import sha256_of
-from reconcile.campaign.patterns import matching, relative_path, resolve
+from reconcile.campaign.patterns import composed, matching, relative_path, resolve
 from reconcile.campaign.readings import FileRead
 from reconcile.campaign.refusal import Note, Place, Refusal, Refused, nearest
 
@@ -96,7 +96,7 @@ class Names:
     """The names of the log's shots or samples, and which of them a name written elsewhere means."""
 
     def __init__(self, known: Iterable[str], what: str) -> None:
-        self.known = dict.fromkeys(known)
+        self.known = {composed(name): name for name in known}
         self.what = what
         self.folded: dict[str, list[str]] = {}
         for name in self.known:
@@ -113,9 +113,10 @@ class Names:
         Refusal
             None fits, or more than one.
         """
+        written = composed(written)
         if written in self.known:
-            return written
-        fitting = self.folded.get(_folded(written), [])
+            return self.known[written]
+        fitting = self.fitting(written)
         if len(fitting) == 1:
             collected.note(place, f"'{written}' taken as the {self.what} '{fitting[0]}' of the log")
             return fitting[0]
@@ -128,9 +129,14 @@ class Names:
             remedy=f"Write '{near}' if that is meant." if near else "Correct the name, here or in the log.",
         )
 
+    def fitting(self, written: str) -> list[str]:
+        """Return the log's names that fit a written one: itself, else those that differ in case, blanks and leading zeros."""
+        exact = self.known.get(composed(written))
+        return [exact] if exact is not None else self.folded.get(_folded(written), [])
+
 
 def _folded(name: str) -> str:
-    return re.sub(r"(?<!\d)0+(?=\d)", "", "".join(name.split()).casefold())
+    return re.sub(r"(?<!\d)0+(?=\d)", "", "".join(composed(name).split()).casefold())
 
 
 def same_source(first: Table, second: Table) -> bool:
