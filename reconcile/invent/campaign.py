@@ -22,6 +22,8 @@ SOUND_FROM = 0.3  # [1] excess from which the probe's pulse is read
 STRAYS, MISREADS = 3, 3
 SLIPPED_POINT = 10.0
 
+Style = Literal["plain", "untidy", "files"]  # of a campaign's folder
+
 # How finely the laboratory writes its numbers down [SI]; what is not listed, to three digits.
 RESOLUTION = {
     "crater-depth": 1e-9,
@@ -96,13 +98,14 @@ class Invented:
         """Return the readings of one kind, in the order of the log."""
         return tuple(reading for reading in self.readings if reading.kind == kind)
 
-    def write(self, folder: Path, *, style: Literal["plain", "untidy"] = "untidy") -> None:
+    def write(self, folder: Path, *, style: Style = "untidy") -> None:
         """Write the campaign folder, and `truth/` in it.
 
         Parameters
         ----------
         folder : made where it does not exist.
-        style : "plain" is tidy CSV; "untidy" is how laboratories keep their folders.
+        style : "plain" is tidy CSV; "untidy" is how laboratories keep their folders; "files" is the same with frames,
+            traces, height maps and micrographs in place of most numbers.
 
         Raises
         ------

@@ -6,16 +6,15 @@ import csv
 import io
 from collections.abc import Iterable, Sequence
 from pathlib import Path
-from typing import Literal
 
 from reconcile.campaign.refusal import Refusal
-from reconcile.invent.campaign import DEPTH_LIMIT, Invented, InventedReading
+from reconcile.invent.campaign import DEPTH_LIMIT, Invented, InventedReading, Style
 from reconcile.invent.truth import BENCH
 
 Cell = str | float | int | None
 
 
-def write(invented: Invented, folder: Path, *, style: Literal["plain", "untidy"]) -> None:
+def write(invented: Invented, folder: Path, *, style: Style) -> None:
     """Write a campaign folder; see `Invented.write`.
 
     Raises
@@ -34,6 +33,11 @@ def write(invented: Invented, folder: Path, *, style: Literal["plain", "untidy"]
         from reconcile.invent.untidy import write_untidy  # it writes with this module's helpers
 
         write_untidy(invented, folder)
+    elif style == "files":
+        from reconcile.invent.files import write_files  # pictures need more than tables do
+
+        write_files(invented, folder)
+        return
     else:
         write_plain(invented, folder)
     write_truth(invented, folder / "truth")

@@ -56,6 +56,7 @@ class Shot:
     bubble: Bubble | None  # None: next to none
     pressure_integral: float  # [Pa² s] as recorded within the probe's bandwidth
     arrival_time: float  # [s]
+    pulse_duration: float  # [s] of the triangle that reaches the probe
 
 
 @dataclass(frozen=True, slots=True)
@@ -102,6 +103,7 @@ def shoot(truth: Truth, energy: float, pulses: int) -> Shot:
         bubble=_bubble(truth, absorbed, excess),
         pressure_integral=integral,
         arrival_time=float(pulse.arrival_time),
+        pulse_duration=float(pulse.duration),
     )
 
 

@@ -18,6 +18,7 @@ Picture = NDArray[np.uint8] | NDArray[np.uint16]
 FINER = 4  # sub-pixels along a pixel's side
 ELECTRONS = 12_000  # of a full pixel of the camera
 READ_NOISE = 10.0  # [electrons]
+OFFSET = 0.02  # [1] of the full range, added by the camera
 DARK = 0.045  # [1] share of the light that gets through a bubble or round the target
 BRIGHT_SPOT = 0.22  # [1] radius of the spot of light that goes straight through, over the bubble's
 
@@ -71,6 +72,16 @@ def shadowgraph(camera: Camera, scene: Scene, rng: np.random.Generator) -> Pictu
     Picture
         (height, width), 8 or 16 bits over the full range.
     """
+    return _quantised(_exposed(_seen(camera, scene, rng), camera, rng), scene.bits)
+
+
+def background(camera: Camera, rng: np.random.Generator, *, bits: int = 16) -> Picture:
+    """Return a frame without a bubble, the mean of 16 exposures."""
+    return _quantised(_exposed(_seen(camera, Scene(None), rng), camera, rng, exposures=16), bits)
+
+
+def _seen(camera: Camera, scene: Scene, rng: np.random.Generator) -> Array:
+    """Return the light that passes target and bubble (height, width) [1], blurred."""
     row = camera.edge_row + float(rng.uniform(-1.5, 1.5))
     tilt = float(np.clip(camera.tilt + np.radians(rng.normal(0, 0.08)), -0.0262, 0.0262))
     middle = 0.5 * (camera.width - 1) + float(rng.uniform(-8, 8))
@@ -79,19 +90,18 @@ def shadowgraph(camera: Camera, scene: Scene, rng: np.random.Generator) -> Pictu
     above = (row - y + np.tan(tilt) * x) * np.cos(tilt) + _roughness(rng, camera.width)  # height over the surface
     seen = np.ones_like(above)
     if scene.radius is not None:
-        seen *= _bubble(np.hypot(x, y - row), x, y - row, scene.radius / camera.pitch, float(rng.uniform(0.5, 0.9)))
+        seen *= _bubble(x, y - row, scene.radius / camera.pitch, float(rng.uniform(0.5, 0.9)))
     if scene.shock_radius is not None:
         seen *= _ring(np.hypot(x, y - row) - scene.shock_radius / camera.pitch)
     glare = 1 + 0.12 * np.sin(x / 40 + rng.uniform(0, 6)) * np.exp(-np.maximum(above, 0) / 3)
     behind = DARK * (0.8 + 0.4 * np.sin(x / 55 + rng.uniform(0, 6)) ** 2)
-    seen = np.where(above > 0, seen * glare, behind)
-    return _exposed(_blurred(seen, rng), camera, scene.bits, rng)
+    return _blurred(np.where(above > 0, seen * glare, behind), rng)
 
 
-def background(camera: Camera, rng: np.random.Generator, *, bits: int = 8) -> Picture:
-    """Return a frame without a bubble, averaged over 16 exposures so that it is almost free of noise."""
-    frames = [shadowgraph(camera, Scene(None, bits=16), rng).astype(np.float64) for _ in range(16)]
-    return _quantised(np.mean(frames, axis=0) / 65_535, bits)
+def dark_frame(camera: Camera, rng: np.random.Generator, *, bits: int = 8) -> Picture:
+    """Return a frame for which the flash did not fire: noise on the camera's offset."""
+    counted = rng.normal(0, READ_NOISE, size=(camera.height, camera.width)) / ELECTRONS
+    return _quantised(counted + OFFSET, bits)
 
 
 def _fine_grid(width: int, height: int) -> tuple[Array, Array]:
@@ -102,9 +112,9 @@ def _fine_grid(width: int, height: int) -> tuple[Array, Array]:
     return columns, rows
 
 
-def _bubble(away: Array, x: Array, y: Array, radius: float, spot: float) -> Array:
+def _bubble(x: Array, y: Array, radius: float, spot: float) -> Array:
     """Return the light that comes through a bubble, fringe outside its edge and spot in its middle included."""
-    outside = away - radius  # [px] of the edge
+    outside = np.hypot(x, y) - radius  # [px] of the edge
     beyond = np.maximum(outside, 0)
     fringe = 1 + 0.16 * np.exp(-beyond / 3.5) * np.sin(2 * np.pi * beyond / 7.0)
     across = np.hypot(x, y + 0.32 * radius) / (BRIGHT_SPOT * radius)
@@ -132,12 +142,12 @@ def _blurred(fine: Array, rng: np.random.Generator) -> Array:
     return np.asarray(ndimage.gaussian_filter(binned, float(rng.uniform(0.6, 1.1)), mode="nearest"))
 
 
-def _exposed(seen: Array, camera: Camera, bits: int, rng: np.random.Generator) -> Picture:
-    """Put a scene into the light, dust and noise on it."""
+def _exposed(seen: Array, camera: Camera, rng: np.random.Generator, exposures: int = 1) -> Array:
+    """Put a scene into the light, dust and noise on it; return shares of the full range (height, width)."""
     dust = np.vstack([camera.dust, _specks(rng, int(rng.integers(2, 6)), camera.width, camera.height)])
     electrons = ELECTRONS * seen * _light(camera, rng) * _dusty(dust, camera.width, camera.height)
-    counted = rng.normal(electrons, np.sqrt(electrons + READ_NOISE**2)) / ELECTRONS
-    return _quantised(counted + 0.02, bits)
+    noise = np.sqrt((electrons + READ_NOISE**2) / exposures)
+    return np.asarray(rng.normal(electrons, noise) / ELECTRONS + OFFSET)
 
 
 def _light(camera: Camera, rng: np.random.Generator) -> Array:
@@ -226,9 +236,7 @@ def scatter_particles(
     return Particles(places[:, 0], places[:, 1], diameters[order], shape, rng.uniform(0.12, 0.4, len(radii)))
 
 
-def micrograph(
-    particles: Particles, pitch: float, rng: np.random.Generator, *, side: int = 512
-) -> NDArray[np.uint8]:
+def micrograph(particles: Particles, pitch: float, rng: np.random.Generator, *, side: int = 512) -> NDArray[np.uint8]:
     """Return a bright-field micrograph: dark particles on an uneven film.
 
     Parameters

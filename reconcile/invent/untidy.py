@@ -18,6 +18,7 @@ from reconcile.invent.truth import BENCH
 
 CREATED = datetime.datetime(2026, 3, 14, 18, 0)  # noqa: DTZ001 - a workbook's own clock has no zone
 NAME = "basin-07"
+TITLE = "Gold under water, small basin, run 7"
 
 
 @dataclass(frozen=True, slots=True)
@@ -56,16 +57,27 @@ def blemishes(invented: Invented) -> Blemishes:
 
 def write_untidy(invented: Invented, folder: Path) -> None:
     """Write the tables as people keep them, their manifest, a stray note and a README."""
-    odd = blemishes(invented)
+    write_tables(invented, folder, blemishes(invented), "Camera 1: bubble radii from the frames")
+    save_text(folder / "README.txt", _README)
+    save_text(folder / "campaign.toml", manifest_head(NAME, TITLE) + TABLES)
+
+
+def write_tables(invented: Invented, folder: Path, odd: Blemishes, radii_title: str) -> None:
+    """Write workbooks and text tables with their oddities, and the note that lies with them.
+
+    Parameters
+    ----------
+    invented : its readings and histograms are what is written down.
+    odd : where the oddities fall.
+    radii_title : the line above the radii.
+    """
     _write_log(invented, folder / "shot log.xlsx", odd)
     _write_craters(invented, folder / "craters.xlsx", odd)
-    _write_radii(invented, folder / "radii.csv", odd)
+    _write_radii(invented, folder / "radii.csv", odd, radii_title)
     _write_lifetimes(invented, folder / "lifetimes.csv", odd)
     _write_sound(invented, folder / "sound.xlsx", odd)
     _write_sizes(invented, folder / "tem counts.xlsx")
     save_text(folder / "notes.txt", _NOTES)
-    save_text(folder / "README.txt", _README)
-    save_text(folder / "campaign.toml", manifest_head(NAME, "Gold under water, small basin, run 7") + _TABLES)
 
 
 @contextmanager
@@ -145,7 +157,7 @@ def _depth_cells(depth: InventedReading, row: int) -> list[Cell]:
     return [_micro(depth.value), _micro(depth.u)]
 
 
-def _write_radii(invented: Invented, path: Path, odd: Blemishes) -> None:
+def _write_radii(invented: Invented, path: Path, odd: Blemishes, title: str) -> None:
     rows = [
         (
             _misspelt(reading.shot or "") if reading.shot == odd.misspelt else reading.shot,
@@ -155,8 +167,7 @@ def _write_radii(invented: Invented, path: Path, odd: Blemishes) -> None:
         )
         for reading in invented.of("bubble-radius")
     ]
-    title = ("Camera 1: bubble radii from the frames", "")
-    save_csv(path, ("Shot", "Delay (us)", "Radius (um)", "u (um)"), rows, above=title)
+    save_csv(path, ("Shot", "Delay (us)", "Radius (um)", "u (um)"), rows, above=(title, ""))
 
 
 def _misspelt(shot: str) -> str:
@@ -219,7 +230,7 @@ Three readings were made grossly wrong on purpose, and three energies in the log
 2.2; truth/ says which. Close the campaign out first, then look there to see how well it did.
 """
 
-_TABLES = f"""
+TABLES = f"""
 [shots]
 file = "shot log.xlsx"
 sheet = "log"
