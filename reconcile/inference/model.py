@@ -303,8 +303,10 @@ TOUCHES: dict[str, tuple[str, ...]] = {
 # How a length or volume read in pixels follows the pixel pitch, by table kind and kind.
 _PITCH_POWER: dict[tuple[str, str], int] = {
     ("shadowgraph", "bubble-radius"): 1,
+    ("shadowgraph", "shock-radius"): 1,
     ("micrograph", "median-diameter"): 1,
     ("crater-map", "crater-diameter"): 1,
+    ("crater-map", "crater-volume"): 2,  # depths do not follow the pitch
 }
 # How readings of sound follow the probe's sensitivity, and which are timed by the trigger.
 _VOLTAGE_POWER = {"pressure-integral": 2}
