@@ -10,7 +10,7 @@ from numpy.typing import NDArray
 
 from reconcile.campaign.quantity import shown
 from reconcile.measure.measured import Array, Finding, Measured, Outline, Stroke, Unmeasurable
-from reconcile.measure.trace_later import Event, Original, find_events, judge
+from reconcile.measure.trace_later import Event, Original, as_copy, find_events, judge
 from reconcile.measure.trace_noise import (
     Baseline,
     Noise,
@@ -22,13 +22,14 @@ from reconcile.measure.trace_noise import (
     spread,
 )
 from reconcile.measure.trace_pulse import (
+    Flags,
     Front,
-    Lobe,
+    Pulse,
     clipped_samples,
+    exponential,
     find_lobe,
     fit_front,
     integrate,
-    shape,
     smear_of_path,
 )
 
@@ -71,7 +72,7 @@ class _Record:
     filtered: Array  # [V] signal averaged over about one pulse that begins at the sample
     noise: Noise  # first estimate, about the background
     level: float  # [V] standard deviation of `filtered` where it is quiet
-    clipped: Array  # flags
+    clipped: Flags
     step: float  # [s]
     setup: ProbeSetup
 
@@ -80,11 +81,10 @@ class _Record:
 class _First:
     """The first pulse."""
 
-    front: Front
-    lobe: Lobe
+    front: Front  # fitted to the rise
+    whole: Front  # fitted to all of it
+    pulse: Pulse
     baseline: Baseline
-    noise: Noise
-    signal: Array  # [V] voltage less baseline
     quiet: Indices  # on which the baseline rests
     pick_up: tuple[int, int] | None
     ends: tuple[int, int]  # of the integral
@@ -148,7 +148,7 @@ def _prepared(time: Array, voltage: Array, setup: ProbeSetup) -> _Record:
     quantum = recorder_step(upright)
     noise = noise_of(signal[np.abs(signal) <= 4.0 * max(sd, quantum)], quantum)
     rise = np.arange(math.ceil(6 * setup.response_time / step) + 1, dtype=np.float64) + 0.5
-    kernel = shape(rise * step, 2 * setup.response_time,
+    kernel = exponential(rise * step, 2 * setup.response_time,
                    setup.response_time, 0.1 * step)  # fmt: skip
     kernel = kernel / math.sqrt(float(kernel @ kernel))
     filtered = np.correlate(signal, kernel, mode="full")[kernel.size - 1 :]
@@ -193,8 +193,9 @@ def _measured_first(record: _Record, noticed: int, loud: tuple[int, int] | None)
     signal = record.voltage - baseline.at(time)
     noise = noise_of(signal[quiet], record.noise.step)
     lobe = find_lobe(signal, noticed, reach, width, 0.5 * noise.sd / math.sqrt(width))
-    clipped = record.clipped
-    front = fit_front(time, signal, lobe, noise, setup.response_time, smear_of_path(setup.standoff), clipped)
+    smear = smear_of_path(setup.standoff)
+    pulse = Pulse(time, signal, record.clipped, lobe, noise, setup.response_time, smear)
+    front = fit_front(pulse)
     if front is None:
         raise Unmeasurable(
             f"a rise at {shown(float(time[lobe.peak]), None, 's')} that is no front",
@@ -202,10 +203,10 @@ def _measured_first(record: _Record, noticed: int, loud: tuple[int, int] | None)
             "Look at the trace; check bandwidth in the manifest.",
         )
     front = replace(front, u=math.hypot(front.u, _slope_u(front, baseline)))
-    value, u, ends = integrate(time, signal, front, lobe, noise, baseline.u(front.time))
-    return _First(
-        front, lobe, baseline, noise, signal, quiet, loud, ends, (value, u), bool(clipped[ends[0] : ends[1] + 1].any())
-    )
+    whole = fit_front(pulse, whole=True) or front
+    value, u, ends = integrate(pulse, whole, baseline.u(front.time))
+    clipped = bool(record.clipped[ends[0] : ends[1] + 1].any())
+    return _First(front, whole, pulse, baseline, quiet, loud, ends, (value, u), clipped)
 
 
 def _slope_u(front: Front, baseline: Baseline) -> float:
@@ -242,22 +243,21 @@ def _of_first(record: _Record, first: _First) -> tuple[list[Measured], list[str]
         measured.append(Measured("pressure-integral", value / gain**2, u / gain**2))
     else:
         remarks.append("the first pulse is too weak for its pressure integral")
-    height = _top(first.signal, first.lobe.peak)
-    measured.append(
-        Measured("peak-pressure", height / gain, math.hypot(first.noise.sd, first.baseline.u(first.front.time)) / gain)
-    )
-    if first.lobe.last + 1 >= record.time.size:
+    height = first.front.top
+    measured.append(Measured("peak-pressure", height / gain, _top_u(record, first, height) / gain))
+    if first.pulse.lobe.last + 1 >= record.time.size:
         remarks.append("the record ends within the first pulse")
     return measured, remarks
 
 
-def _top(signal: Array, peak: int) -> float:
-    """Return the height [V] of the parabola through the largest sample and its neighbours."""
-    if not 0 < peak < signal.size - 1:
-        return float(signal[peak])
-    a, b, c = (float(one) for one in signal[peak - 1 : peak + 2])
-    bend = a - 2 * b + c
-    return b - (a - c) ** 2 / (8 * bend) if bend < 0 else b
+def _top_u(record: _Record, first: _First, height: float) -> float:
+    """Return the uncertainty [V] of the fitted pulse's height: noise and baseline over it, and how far samples lie off."""
+    begin, end = first.ends
+    fitted = first.front.at(record.time[begin : end + 1])
+    share = first.pulse.noise.of_sum(fitted) / max(float(fitted @ fitted), 1e-30) ** 2
+    near = slice(max(first.pulse.lobe.peak - 1, 0), first.pulse.lobe.peak + 2)
+    off = float(np.mean(first.pulse.signal[near] - first.front.at(record.time[near])))
+    return math.hypot(height * math.sqrt(share), first.baseline.u(first.front.time), off)
 
 
 # --- after it ---------------------------------------------------------------------------------------------------
@@ -271,14 +271,13 @@ def _later(record: _Record, first: _First) -> list[Event]:
     level = _ABOVE_LATER * record.level
     if record.noise.step > record.noise.sd:
         level = max(level, 1.5 * record.noise.step)
-    after = min(math.ceil(8 * setup.response_time / record.step) + 2, time.size - first.lobe.last)
-    samples = first.signal[first.ends[0] : first.lobe.last + after]
-    original = Original(
-        samples, float(first.signal[first.lobe.peak]), first.front.time, setup.standoff, setup.sound_speed
-    )
+    lobe = first.pulse.lobe
+    copied = Original(first.whole, setup.standoff, setup.travel, record.noise.sd, 0.0)
+    itself = Event(lobe.first, lobe.peak, lobe.last, float(first.pulse.signal[lobe.peak]))
+    copied = replace(copied, misfit=as_copy(itself, first.pulse.signal, time, copied)[1])
     judged = []
     for event in find_events(record.filtered, record.signal, begin, level, apart):
-        one = judge(event, record.signal, record.step, time, original, record.noise)
+        one = judge(event, record.signal, time, copied)
         if setup.lifetime_hint is not None:
             after_laser = float(time[event.peak]) - setup.trigger_offset - setup.travel
             far = abs(math.log(max(after_laser, record.step) / setup.lifetime_hint))
@@ -301,7 +300,7 @@ def _collapse_front(record: _Record, event: Event) -> Front | None:
     low = 0.5 * record.noise.sd / math.sqrt(width)
     lobe = find_lobe(signal, event.first, event.last - event.first + 12 * width + 4, width, low)
     smear = smear_of_path(setup.standoff)
-    front = fit_front(record.time, signal, lobe, record.noise, setup.response_time, smear, record.clipped)
+    front = fit_front(Pulse(record.time, signal, record.clipped, lobe, record.noise, setup.response_time, smear))
     return None if front is None else replace(front, u=math.hypot(front.u, _slope_u(front, baseline)))
 
 

@@ -3,20 +3,19 @@
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
-from scipy.ndimage import gaussian_filter1d
 
 from reconcile.measure.measured import Array
-from reconcile.measure.trace_noise import Noise
+from reconcile.measure.trace_pulse import Front, smear_of_path
 
 # What is expected of an echo and of a collapse, as densities of three features (common practice, wide on purpose):
 # log of the amplitude over the first pulse's; misfit of the first pulse's shape; sign.
 _REFLECTED = 0.6  # usual reflectivity of a wall or the surface, seen past the probe's directivity
 _ECHO_SPREAD, _COLLAPSE_SPREAD = 0.5, 1.0  # sd of the logarithm
 _COLLAPSE_LEVEL = 1.3  # a collapse is about as loud as the first pulse
-_ECHO_MISFIT, _COLLAPSE_MISFIT = 0.08, 0.5
+_ECHO_MISFIT, _COLLAPSE_MISFIT = 0.1, 0.5
 _NEGATIVE_COLLAPSE = 0.02  # chance that a collapse is noticed by a tension first
 
 
@@ -33,13 +32,13 @@ class Event:
 
 @dataclass(frozen=True, slots=True)
 class Original:
-    """The first pulse, with which echoes are compared."""
+    """The first pulse, with copies of which later ones are compared."""
 
-    samples: Array  # (m,) [V] baseline taken off
-    height: float  # [V] at its peak
-    arrival: float  # [s] in the record
+    front: Front  # fitted to all of it
     standoff: float  # [m]
-    sound_speed: float  # [m/s]
+    travel: float  # [s] from site to probe
+    noise: float  # [V] standard deviation of a sample
+    misfit: float  # of the fitted pulse to the first one itself
 
 
 def find_events(filtered: Array, signal: Array, begin: int, level: float, apart: int) -> list[Event]:
@@ -66,55 +65,61 @@ def find_events(filtered: Array, signal: Array, begin: int, level: float, apart:
     return events
 
 
-def judge(
-    event: Event, signal: Array, step: float, time: Array, original: Original, noise: Noise
-) -> Event:  # reason: one pulse
+def judge(event: Event, signal: Array, time: Array, original: Original) -> Event:
     """Return the event with the odds for a collapse.
 
     An echo is a scaled copy of the first pulse, at most as loud as spreading over its longer path leaves it; a
     collapse is a compression of its own shape, louder or quieter than the first pulse.
+
+    Parameters
+    ----------
+    event : what stands out
+    signal, time : (n,) [V] slow background taken off, [s]
+    original : the first pulse
     """
-    lag = max(float(time[event.peak]) - original.arrival, step)
-    path = original.standoff + original.sound_speed * lag
-    spreading = original.standoff / path
-    ratio = max(abs(event.height) / original.height, 1e-3)
-    misfit, uncertain = _misfit(event, signal, original, noise)
-    echo = _normal(math.log(ratio / (_REFLECTED * spreading)), _ECHO_SPREAD)
-    own = _normal(math.log(ratio / _COLLAPSE_LEVEL), _COLLAPSE_SPREAD)
-    odds = own - echo
-    odds += _normal(misfit, math.hypot(_COLLAPSE_MISFIT, uncertain)) - _normal(
-        misfit, math.hypot(_ECHO_MISFIT, uncertain)
-    )
-    odds += math.log(_NEGATIVE_COLLAPSE / 0.5) if event.height < 0 else math.log((1 - _NEGATIVE_COLLAPSE) / 0.5)
-    return Event(event.first, event.peak, event.last, event.height, odds)
+    step = float(time[1] - time[0])
+    lag = max(float(time[event.peak]) - original.front.time, step)
+    spreading = original.travel / (original.travel + lag)
+    scale, misfit, uncertain = as_copy(event, signal, time, original, original.standoff * (1.0 / spreading - 1.0))
+    misfit = math.sqrt(max(misfit**2 - original.misfit**2, 0.0))
+    ratio = max(abs(scale), 1e-3)
+    odds = _normal(math.log(ratio / _COLLAPSE_LEVEL), _COLLAPSE_SPREAD)
+    odds -= _normal(math.log(ratio / (_REFLECTED * spreading)), _ECHO_SPREAD)
+    odds += _normal(misfit, math.hypot(_COLLAPSE_MISFIT, uncertain))
+    odds -= _normal(misfit, math.hypot(_ECHO_MISFIT, uncertain))
+    odds += math.log((_NEGATIVE_COLLAPSE if scale < 0 else 1 - _NEGATIVE_COLLAPSE) / 0.5)
+    return replace(event, odds=odds)
 
 
 def _normal(value: float, sd: float) -> float:
     return -0.5 * (value / sd) ** 2 - math.log(sd)
 
 
-def _misfit(event: Event, signal: Array, original: Original, noise: Noise) -> tuple[float, float]:
-    """Return how far the event departs from the best copy of the first pulse (0 none, 1 nothing in common), and its u.
+def as_copy(
+    event: Event, signal: Array, time: Array, original: Original, path: float = 0.0
+) -> tuple[float, float, float]:
+    """Compare an event with copies of the first pulse: scaled, turned over, shifted, smeared by `path` [m] more of water.
 
-    A copy may be scaled, turned over, shifted by parts of a sample, and smeared by absorption on its way.
+    Returns
+    -------
+    Scale of the best copy; how far the event departs from it (0 not at all, 1 nothing in common), and the u of that.
     """
-    copy = original.samples
-    m = copy.size
-    lead = int(np.argmax(np.abs(copy)))
-    start = event.peak - lead - 2
-    piece = signal[max(start, 0) : start + m + 4]
-    if piece.size < m + 4:
-        return 0.25, 0.25  # cut by the end of the record: its shape says little
-    power = max(float(piece @ piece) - piece.size * noise.sd**2, 1e-30)
-    floor = piece.size * noise.sd**2 * (1.0 + (event.height / original.height) ** 2)
-    best = math.inf
-    at = np.arange(m + 4, dtype=np.float64)
-    padded = np.concatenate((np.zeros(4), copy, np.zeros(4)))
-    for blur in (0.0, 0.7, 1.5, 3.0):
-        blurred = gaussian_filter1d(padded, blur) if blur else padded
-        for shift in np.arange(-2.5, 2.51, 0.25):
-            moved = np.interp(at + 2.0 - shift, np.arange(padded.size), blurred)
-            scale = float(moved @ piece) / max(float(moved @ moved), 1e-30)
-            best = min(best, float(np.sum((piece - scale * moved) ** 2)))
+    first, sd = original.front, original.noise
+    step = float(time[1] - time[0])
+    around = math.ceil((4.0 * first.response + first.decay) / step) + 2
+    begin, end = max(0, event.first - around), min(signal.size, event.peak + 2 * around)
+    piece, t = signal[begin:end] - signal[begin:end].mean(), time[begin:end]
+    best, scale = math.inf, 0.0
+    for smear in (first.smear, math.hypot(first.smear, smear_of_path(path))):
+        copy = replace(first, smear=smear)
+        for coarse in np.arange(time[event.first] - 2 * first.response, time[event.peak] + step, 0.2 * first.response):
+            moved = copy.at(t - (coarse - first.time))
+            moved = moved - moved.mean()  # what is left of drift and hum under the event does not count
+            size = float(moved @ piece) / max(float(moved @ moved), 1e-30)
+            rest = float(np.sum((piece - size * moved) ** 2))
+            if rest < best:
+                best, scale = rest, size
+    floor = piece.size * sd**2
+    power = max(float(piece @ piece) - floor, 0.1 * floor, 1e-30)
     left = max(best - floor, 0.0) / power
-    return math.sqrt(min(left, 1.0)), math.sqrt(min(0.5 * floor / power, 1.0))
+    return scale, math.sqrt(min(left, 1.0)), math.sqrt(min(math.sqrt(2.0 * piece.size) * sd**2 / power, 1.0))

@@ -3,34 +3,45 @@
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from collections.abc import Callable
+from dataclasses import dataclass, replace
 
 import numpy as np
+from numpy.typing import NDArray
 from scipy.optimize import least_squares
-from scipy.special import erfcx
+from scipy.special import erfcx, ndtr
 
 from reconcile.measure.measured import Array
 from reconcile.measure.trace_noise import Noise
 
 ABSORPTION = 25e-15  # [s²/m] of sound in water over the frequency squared (Pinkerton 1949, from memory)
-# The front's true shape departs from a jump followed by a decay: share of the response time that stays unknown.
-_SHAPE = 0.05
+# The front's true shape departs from a jump that decays: share of the response time that stays unknown.
+_SHAPE = 0.02
+Flags = NDArray[np.bool_]
+_ROOT_2 = math.sqrt(2.0)
 
 
 @dataclass(frozen=True, slots=True)
 class Front:
-    """A fitted pulse: a jump to `height`, decaying over `decay`, smeared and seen through a one-pole probe."""
+    """A fitted pulse: a jump to `height` that decays, smeared, seen through a one-pole probe."""
 
     time: float  # [s] of the jump, in the record
     u: float  # [s]
     height: float  # [V] of the jump, before the probe's pole
-    decay: float  # [s]
+    decay: float  # [s] decay time, or duration
     smear: float  # [s] standard deviation
     response: float  # [s]
+    form: Callable[[Array, float, float, float], Array]  # of the decay
 
     def at(self, time: Array) -> Array:
         """Return the fitted pulse [V] at times (n,) [s]."""
-        return self.height * shape(time - self.time, self.decay, self.response, self.smear)
+        return self.height * self.form(time - self.time, self.decay, self.response, self.smear)
+
+    @property
+    def top(self) -> float:
+        """Return the largest voltage [V] of the fitted pulse."""
+        reach = 2.0 * (self.decay + 4.0 * self.response) if self.decay < 20 * self.response else 40.0 * self.response
+        return float(self.at(self.time + np.linspace(0.0, reach, 2001)).max())
 
 
 @dataclass(frozen=True, slots=True)
@@ -42,7 +53,20 @@ class Lobe:
     last: int  # before it crosses zero or sinks into the noise
 
 
-def shape(time: Array, decay: float, response: float, smear: float) -> Array:
+@dataclass(frozen=True, slots=True)
+class Pulse:
+    """What a front is fitted to."""
+
+    time: Array  # (n,) [s]
+    signal: Array  # (n,) [V] positive in compression, baseline taken off
+    clipped: Flags  # (n,)
+    lobe: Lobe
+    noise: Noise
+    response: float  # [s] of the probe
+    smear: float  # [s] typical one; the fit may depart from it by a factor
+
+
+def exponential(time: Array, decay: float, response: float, smear: float) -> Array:
     """Return a unit jump with exponential decay through a one-pole probe, smeared by a Gaussian.
 
     Parameters
@@ -58,12 +82,41 @@ def shape(time: Array, decay: float, response: float, smear: float) -> Array:
     return decay / (decay - response) * (_smeared(time, decay, smear) - _smeared(time, response, smear))
 
 
+def triangle(time: Array, duration: float, response: float, smear: float) -> Array:
+    """Return a unit jump that falls to zero along a line through a one-pole probe, smeared by a Gaussian.
+
+    Parameters
+    ----------
+    time : (n,) [s] from the jump
+    duration, response : [s]
+    smear : [s] above 0
+
+    Source: step less ramp/duration, from `duration` on plus that ramp; each convolved with pole and Gaussian.
+    """
+    return (
+        _step(time, response, smear)
+        - (_ramp(time, response, smear) - _ramp(time - duration, response, smear)) / duration
+    )
+
+
+FORMS = (exponential, triangle)
+
+
 def _smeared(time: Array, decay: float, smear: float) -> Array:
     """Return e^(−t/decay) from t = 0 on, convolved with a Gaussian."""
     late = time > smear**2 / decay + 6.0 * smear
     early = np.where(late, 0.0, time)
-    result = 0.5 * np.exp(-0.5 * (early / smear) ** 2) * erfcx((smear / decay - early / smear) / math.sqrt(2.0))
+    result = 0.5 * np.exp(-0.5 * (early / smear) ** 2) * erfcx((smear / decay - early / smear) / _ROOT_2)
     return np.where(late, np.exp(np.minimum(0.5 * (smear / decay) ** 2 - time / decay, 50.0)), result)
+
+
+def _step(time: Array, response: float, smear: float) -> Array:
+    return ndtr(time / smear) - _smeared(time, response, smear)
+
+
+def _ramp(time: Array, response: float, smear: float) -> Array:
+    rising = time * ndtr(time / smear) + smear * np.exp(-0.5 * (time / smear) ** 2) / math.sqrt(2.0 * math.pi)
+    return rising - response * _step(time, response, smear)
 
 
 def smear_of_path(path: float) -> float:
@@ -95,73 +148,84 @@ def find_lobe(signal: Array, start: int, reach: int, width: int, low: float) -> 
     return Lobe(first, peak, max(last, peak))
 
 
-def fit_front(  # reason: one set of numbers that belong to one fit
-    time: Array, signal: Array, lobe: Lobe, noise: Noise, response: float, smear: float, clipped: Array
-) -> Front | None:
-    """Fit the rise of a pulse, clipped samples counting as "at least this".
-
-    Parameters
-    ----------
-    time, signal : (n,) [s], [V] positive in compression, baseline taken off
-    lobe : where the pulse is
-    noise : of a sample
-    response : [s] of the probe
-    smear : [s] typical one; the fit may depart from it by a factor
-    clipped : (n,) whether a sample was clipped
+def fit_front(pulse: Pulse, whole: bool = False) -> Front | None:
+    """Fit the rise of a pulse, or the whole of its first compression; clipped samples count as "at least this".
 
     Returns
     -------
     None where the fit finds no front.
     """
+    time, signal, lobe, noise, response = pulse.time, pulse.signal, pulse.lobe, pulse.noise, pulse.response
     step = float(time[1] - time[0])
     before = math.ceil(6.0 * response / step) + 6
-    after = max(math.ceil(1.5 * response / step), 2)
+    after = lobe.last + 1 if whole else min(lobe.peak + max(math.ceil(1.5 * response / step), 2), lobe.last + 1)
     begin = max(0, lobe.first - before)
-    end = min(signal.size, max(min(lobe.peak + after, lobe.last + 1), lobe.peak + 2) + 1)
-    while end < signal.size and clipped[end - 1]:
+    end = min(signal.size, max(after, lobe.peak + 2) + 1)
+    while end < signal.size and pulse.clipped[end - 1]:
         end += 1
-    t, y, top = time[begin:end] - time[lobe.first], signal[begin:end], clipped[begin:end]
+    t: Array = np.asarray(time[begin:end] - time[lobe.first], dtype=np.float64)
+    y, top = signal[begin:end], pulse.clipped[begin:end]
     sd = noise.sd * math.sqrt(noise.excess)
     largest = max(float(signal[lobe.peak]), noise.sd)
+    data = (t, y, sd, top)
+    fits = [fit for form in FORMS if (fit := _fitted(data, form, (largest, response, pulse.smear))) is not None]
+    if not fits:
+        return None
+    # Both forms of decay count by how well they fit: their difference belongs to the uncertainty.
+    weights = np.exp(np.array([fits[0][1] - cost for _, cost in fits]).clip(-700, 700))
+    weights /= weights.sum()
+    times = np.array([front.time for front, _ in fits])
+    mean = float(weights @ times)
+    variance = float(weights @ (np.array([front.u for front, _ in fits]) ** 2 + (times - mean) ** 2))
+    best = fits[int(np.argmax(weights))][0]
+    if not t[0] - 2 * response < mean < t[-1]:
+        return None
+    u = math.hypot(math.sqrt(variance), _SHAPE * response)
+    return replace(best, time=float(time[lobe.first]) + mean, u=u)
+
+
+def _fitted(
+    data: tuple[Array, Array, float, Flags],
+    form: Callable[[Array, float, float, float], Array],
+    scales: tuple[float, float, float],
+) -> tuple[Front, float] | None:
+    """Fit one form to (times, signal, sd of a sample, which samples were clipped); scales: height, response, smear.
+
+    Returns
+    -------
+    The front, its time counted as `times` are, and half its sum of squares.
+    """
+    t, y, sd, top = data
+    largest, response, smear = scales
 
     def parts(x: Array) -> tuple[float, float, float, float]:
-        return (
-            largest * math.exp(min(x[0], 20.0)),
-            x[1] * response,
-            response * math.exp(min(x[2], 12.0)),
-            smear * math.exp(min(x[3], 4.0)),
-        )
+        height, at, decay, blur = x.tolist()
+        decay = response * math.exp(min(max(decay, -6.0), 12.0))
+        return largest * math.exp(min(height, 20.0)), at * response, decay, smear * math.exp(min(max(blur, -6.0), 4.0))
 
     def residuals(x: Array) -> Array:
         height, at, decay, blur = parts(x)
-        off = (height * shape(t - at, decay, response, blur) - y) / sd
+        off = (height * form(t - at, decay, response, blur) - y) / sd
         off[top] = np.minimum(off[top], 0.0)
-        return np.concatenate((off, [(x[2] - math.log(3.0)) / 1.5, x[3], 0.2 * (x[0] - 0.7)]))
+        return np.concatenate((off, [(x[2] - math.log(4.0)) / 1.5, x[3], 0.2 * (x[0] - 0.7)]))
 
-    best = None
-    for guess in (0.0, -1.0):
-        fit = least_squares(residuals, np.array([0.7, guess, math.log(3.0), 0.0]), method="lm", max_nfev=400)
-        if best is None or fit.cost < best.cost:
-            best = fit
-    if best is None or not np.isfinite(best.x).all():
+    fit = least_squares(residuals, np.array([0.7, -0.3, math.log(4.0), 0.0]), method="lm", max_nfev=400)
+    if not np.isfinite(fit.x).all() or not np.isfinite(fit.fun).all():
         return None
-    height, at, decay, blur = parts(best.x)
-    slopes = np.asarray(best.jac, dtype=np.float64)
+    height, at, decay, blur = parts(fit.x)
+    slopes = np.asarray(fit.jac, dtype=np.float64)
     covariance = np.linalg.pinv(slopes.T @ slopes)
-    worse = max(1.0, float(np.sum(best.fun[: t.size] ** 2)) / max(t.size - 4, 1))
-    u = math.hypot(response * math.sqrt(max(float(covariance[1, 1]), 0.0) * worse), _SHAPE * response)
-    if not t[0] - 2 * response < at < t[-1] or not math.isfinite(u):
-        return None
-    return Front(float(time[lobe.first]) + float(at), u, float(height), float(decay), float(blur), response)
+    worse = max(1.0, float(np.sum(fit.fun[: t.size] ** 2)) / max(t.size - 4, 1))
+    u = response * math.sqrt(max(float(covariance[1, 1]), 0.0) * worse)
+    return Front(at, u, height, decay, blur, response, form), float(fit.cost)
 
 
-def integrate(  # reason: as above
-    time: Array, signal: Array, front: Front, lobe: Lobe, noise: Noise, baseline_u: float
-) -> tuple[float, float, tuple[int, int]]:
+def integrate(pulse: Pulse, front: Front, baseline_u: float) -> tuple[float, float, tuple[int, int]]:
     """Return ∫V²dt over the first compression, its standard uncertainty [V²·s], and the first and last sample of it.
 
     The noise's own power is taken off; what lies between samples is added from the fitted pulse.
     """
+    time, signal, lobe, noise = pulse.time, pulse.signal, pulse.lobe, pulse.noise
     step = float(time[1] - time[0])
     begin = int(np.searchsorted(time, front.time - 4.0 * front.smear))
     begin, end = min(begin, lobe.peak), max(lobe.last, lobe.peak)
@@ -178,7 +242,7 @@ def integrate(  # reason: as above
     return float(total + between), u, (begin, end)
 
 
-def clipped_samples(voltage: Array, step: float, noise: float, full_scale: float | None) -> Array:
+def clipped_samples(voltage: Array, step: float, noise: float, full_scale: float | None) -> Flags:
     """Return which samples (n,) the recorder clipped.
 
     They lie at full scale; or at the record's largest or smallest value, three or more in a row, with a jump on
