@@ -51,7 +51,7 @@ def _save_csv(path: Path, steps: NDArray[np.int32], recorder: Recorder) -> None:
         "t (us),probe (mV)",
     ]
     values = zip(1e6 * recorder.time, 1e3 * volts(steps, recorder), strict=True)
-    lines = [f"{time:.3f},{voltage:.4g}" for time, voltage in values]
+    lines = [f"{time:.3f},{voltage:.5g}" for time, voltage in values]
     save_text(path, "\n".join([*head, *lines, ""]))
 
 
