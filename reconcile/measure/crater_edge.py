@@ -1,0 +1,186 @@
+"""Where a crater's profile ends: a step, or the place at which it reaches the level of the surround."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from scipy.special import ndtr
+
+from reconcile.measure.levelling import Array
+from reconcile.measure.measured import Unmeasurable
+
+BIN = 0.25  # points
+BLURS = (0.3, 0.45, 0.7, 1.0, 1.5)  # points; standard deviations by which instrument and averaging widen a step
+SURE = 5.0  # standard uncertainties by which a step must stand out
+WINDOW = 0.2  # of the radius, on either side of the edge
+LEAST_WINDOW = 4.0  # points
+PARTIAL = 0.25  # of a step: how far below the surround its upper end may seem to lie
+FLOOR = 0.02  # points: what the raster leaves of a step's place however little noise there is
+
+
+@dataclass(frozen=True, slots=True)
+class Edge:
+    """The end of the removed area along the profile."""
+
+    at: float  # distance from where the profile's distances count from
+    u: float  # its standard uncertainty, that of the surround's level left out
+    slope: float  # of the profile there [height / point]
+    step: bool  # a step stands there
+
+
+@dataclass(frozen=True, slots=True)
+class Profile:
+    """Mean heights in narrow rings."""
+
+    x: Array  # (n,) distance [points]
+    h: Array  # (n,) height
+    sd: Array  # (n,) standard uncertainty
+
+
+@dataclass(frozen=True, slots=True)
+class _Step:
+    """Parabolas on both sides of a blurred step."""
+
+    at: float
+    blur: float
+    solution: Array  # inner 1, x, x²; then what the outer one differs by, about `at`
+    covariance: Array
+    chi2: float
+
+
+def find_edge(distance: Array, height: Array, radius: float, noise: float, together: float) -> Edge:
+    """Find where the removed area ends.
+
+    Parameters
+    ----------
+    distance : Array
+        Of every point from the crater's outline at a lower level, outwards positive [points].
+    height : Array
+        Of every point above the surround; NaN: missing.
+    radius : float
+        Of that outline [points].
+    noise : float
+        Standard deviation of a point's height.
+    together : float
+        Points that err together.
+
+    Returns
+    -------
+    Edge
+        At a step where the profile has one that ends at or above the surround, else where the profile reaches the surround.
+    """
+    profile = ring_means(distance, height, (-0.6 * radius, max(0.8 * radius, 8.0)), noise * np.sqrt(together))
+    about = _rough_crossing(profile)
+    reach = max(LEAST_WINDOW, WINDOW * radius)
+    near = np.abs(profile.x - about) <= reach
+    if np.count_nonzero(near) < 14:
+        raise Unmeasurable(
+            "too few points along the edge of the crater",
+            "heights on most of the edge",
+            "Measure the site again, with more light or a finer pitch.",
+        )
+    window = Profile(profile.x[near], profile.h[near], profile.sd[near])
+    step, place_u = _best_step(window, about, 0.6 * reach)
+    jump, jump_u = float(step.solution[3]), float(np.sqrt(step.covariance[3, 3]))
+    inner = float(step.solution[0])
+    if jump > SURE * jump_u and inner < 0 and inner + jump > -PARTIAL * jump:
+        slope = jump / (step.blur * np.sqrt(2 * np.pi)) + abs(float(step.solution[1]))
+        return Edge(step.at, float(np.hypot(place_u, FLOOR)), slope, True)
+    return _crossing(step, reach)
+
+
+def ring_means(distance: Array, height: Array, ends: tuple[float, float], noise: float) -> Profile:
+    """Return the mean height in narrow rings, points far from their ring left out.
+
+    Parameters
+    ----------
+    distance, height : Array
+        Of every point [points], [height]; NaN: missing.
+    ends : tuple
+        From where to where [points].
+    noise : float
+        The least standard deviation of a point, correlation counted in.
+    """
+    used = np.isfinite(height) & (distance > ends[0]) & (distance < ends[1])
+    index = ((distance[used] - ends[0]) / BIN).astype(int)
+    values, places = height[used], distance[used]
+    size = int((ends[1] - ends[0]) / BIN) + 1
+    kept = np.ones(values.size, dtype=bool)
+    mean = place = spread = count = np.zeros(size)
+    for _ in range(2):  # the second time without what lies far from its ring
+        count = np.bincount(index[kept], minlength=size)
+        some = np.maximum(count, 1)
+        mean = np.bincount(index[kept], values[kept], minlength=size) / some
+        place = np.bincount(index[kept], places[kept], minlength=size) / some
+        square = np.bincount(index[kept], (values[kept] - mean[index[kept]]) ** 2, minlength=size) / some
+        spread = np.sqrt(np.clip(square, noise**2, None)) + 1e-300
+        kept = np.abs(values - mean[index]) <= 4 * spread[index]
+    enough = count >= 3
+    return Profile(place[enough], mean[enough], spread[enough] / np.sqrt(count[enough]))
+
+
+def _rough_crossing(profile: Profile) -> float:
+    """Return where the profile first rises to the surround, on its way out; from below the noise by its slope."""
+    smooth = np.convolve(np.pad(profile.h, 1, mode="edge"), [0.25, 0.5, 0.25], mode="valid")
+    start = int(np.argmin(np.abs(profile.x + 0.2 * abs(profile.x[0]))))
+    for index in range(start, smooth.size):
+        if smooth[index] >= -0.5 * profile.sd[index]:
+            return float(profile.x[index])
+    return float(profile.x[-1])
+
+
+def _basis(x: Array, blur: float) -> Array:
+    """Return 1, x, x² and the same begun at 0, blurred by a Gaussian: (n, 6)."""
+    rise, bell = ndtr(x / blur), np.exp(-0.5 * (x / blur) ** 2) / np.sqrt(2 * np.pi)
+    line = x * rise + blur * bell
+    square = (x * x + blur**2) * rise + blur * x * bell
+    return np.stack([np.ones_like(x), x, x * x + blur**2, rise, line, square], axis=1)
+
+
+def _best_step(window: Profile, about: float, reach: float) -> tuple[_Step, float]:
+    """Return the likeliest place and blur of a step, and the standard uncertainty of the place."""
+    offsets = np.arange(-reach, reach + 0.01, 0.25)
+    best = min((_likeliest(window, about + offset) for offset in offsets), key=lambda one: one.chi2)
+    fine = [_step(window, best.at + offset, best.blur) for offset in np.arange(-0.25, 0.26, 0.025)]
+    best = min(fine, key=lambda one: one.chi2)
+    # The uncertainty: as far as the misfit grows by that of one standard uncertainty.
+    usual = max(best.chi2 / max(window.x.size - 8, 1), 1.0)
+    for offset in (0.1, 0.2, 0.4, 0.8, 1.6, 3.2):
+        growth = [_likeliest(window, best.at + side * offset).chi2 - best.chi2 for side in (-1, 1)]
+        if min(growth) > usual:
+            return best, offset * float(np.sqrt(usual / np.mean(growth)))
+    return best, reach
+
+
+def _likeliest(window: Profile, at: float) -> _Step:
+    return min((_step(window, at, blur) for blur in BLURS), key=lambda one: one.chi2)
+
+
+def _step(window: Profile, at: float, blur: float) -> _Step:
+    design = _basis(window.x - at, blur) / window.sd[:, None]
+    target = window.h / window.sd
+    normal = design.T @ design
+    scale = np.sqrt(np.diag(normal)) + 1e-300
+    inverse = np.linalg.pinv(normal / np.outer(scale, scale), rcond=1e-10) / np.outer(scale, scale)
+    solution = inverse @ (design.T @ target)
+    chi2 = float(np.sum((target - design @ solution) ** 2))
+    return _Step(at, blur, solution, inverse * max(chi2 / max(target.size - 8, 1), 1.0), chi2)
+
+
+def _crossing(step: _Step, reach: float) -> Edge:
+    """Return where the parabola on the inner side of the weak step, or of the bend, meets the surround."""
+    solution, covariance = step.solution[:3], step.covariance[:3, :3]
+    roots = np.roots(solution[::-1])
+    real = roots[np.abs(roots.imag) < 1e-9].real
+    rising = [root for root in real if solution[1] + 2 * solution[2] * root > 0 and abs(root) <= reach]
+    if rising:
+        at = float(min(rising, key=abs))
+    elif solution[1] > 0:
+        at = float(np.clip(-solution[0] / solution[1], -reach, reach))
+    else:
+        at = 0.0
+    slope = max(float(solution[1] + 2 * solution[2] * at), 1e-300)
+    terms = np.array([1.0, at, at * at])
+    u = float(np.sqrt(terms @ covariance @ terms)) / slope
+    return Edge(step.at + at, float(np.hypot(min(u, reach), FLOOR)), slope, False)
