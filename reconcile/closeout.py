@@ -63,7 +63,7 @@ def closeout(  # reason: the options of one verb
         checkpoint=checkpoint,
     )
     progress("judging", 0, 0)
-    close_out = conclude(fitted, gathered, seed=seed, target=target)
+    close_out = conclude(fitted, gathered, seed=seed, target=target, workers=workers)
     progress("writing", 0, 0)
     place = whole_folder(folder)
     with place as staging:

@@ -23,13 +23,13 @@ _LITTLE = 0.1  # `informed` below which an input counts as untold
 _BAND_POINTS, _BAND_DRAWS = 40, 400
 
 
-def conclude(fitted: Fitted, gathered: Gathered, *, seed: int, target: int) -> CloseOut:
+def conclude(fitted: Fitted, gathered: Gathered, *, seed: int, target: int, workers: int = 1) -> CloseOut:
     """Bring everything together that a report may know."""
-    rngs = [np.random.default_rng(child) for child in np.random.SeedSequence(seed).spawn(8)[4:]]
-    judged = judge(fitted, gathered, rngs[0])
+    for_shots, for_kinds, for_priors, for_bands = np.random.SeedSequence(seed).spawn(8)[4:]
+    judged = judge(fitted, gathered, np.random.default_rng(for_shots))
     counts = Counter(reading.kind for reading in fitted.problem.data.readings)
-    kinds = agreement(fitted.start, counts, rngs[1])
-    inputs = input_results(fitted, rngs[2])
+    kinds = agreement(fitted.start, counts, for_kinds, workers)
+    inputs = input_results(fitted, np.random.default_rng(for_priors))
     strained, budget = strained_inputs(fitted), budgets(fitted)
     sampling = _sampling(fitted, target)
     reasons = _status_reasons(sampling, kinds, strained, fitted)
@@ -51,7 +51,7 @@ def conclude(fitted: Fitted, gathered: Gathered, *, seed: int, target: int) -> C
         could_not_tell=_could_not_tell(fitted, inputs, budget),
         sampling=sampling,
         posterior=stored(fitted),
-        bands=tuple(_bands(fitted, rngs[3])),
+        bands=tuple(_bands(fitted, np.random.default_rng(for_bands))),
     )
 
 

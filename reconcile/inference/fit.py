@@ -13,6 +13,7 @@ from reconcile.inference.adapt import Begin
 from reconcile.inference.checkpoint import Checkpoint, Stored
 from reconcile.inference.coordinates import Inputs
 from reconcile.inference.lattice import STEP, Lattice, full_points
+from reconcile.inference.memory import keep_freed_memory
 from reconcile.inference.model import Array, Expected
 from reconcile.inference.problem import Data, Problem
 from reconcile.inference.sampling import Draws, Memory, sample
@@ -66,6 +67,7 @@ def fit(
     ------
     Refusal : a material lacks a property or an input has no default prior.
     """
+    keep_freed_memory()
     began = time.monotonic()
     root = np.random.SeedSequence(seed)
     for_start, for_sampling, for_priors, for_check = root.spawn(4)

@@ -35,7 +35,7 @@ _RATES = ("energy_jitter", "stray_rate", "misread_rate")
 # Bubble and shock together hold little more than half of what was absorbed: the rest stays in the metal as heat.
 # Own judgement over published energy balances; a soft bound, so that no draw is lost to a hard one.
 CLOSURE, CLOSURE_SPREAD = 0.5, 0.05
-_CHUNK = 16  # draws worked at once: their arrays then stay in the cache, and pages are not asked for anew
+_CHUNK = 32  # draws worked at once: their arrays then stay in the cache
 
 
 @dataclass(frozen=True, slots=True)

@@ -6,11 +6,8 @@ walkers of one ensemble are no independent chains.
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterator
-from concurrent.futures import Executor, ProcessPoolExecutor
-from contextlib import contextmanager
+from collections.abc import Callable
 from dataclasses import dataclass, replace
-from multiprocessing import get_context
 from typing import Any, Protocol
 
 import numpy as np
@@ -19,6 +16,7 @@ from reconcile.campaign.progress import Progress
 from reconcile.inference.adapt import Begin, adapt
 from reconcile.inference.model import Array
 from reconcile.inference.proposal import Mixture
+from reconcile.inference.workers import spread_over
 
 ENSEMBLES = 4
 _BURN_IN = 10  # steps dropped: the walkers begin at weighted points of the adapted pool
@@ -103,7 +101,7 @@ def sample(
     memory : where the ensembles are kept between rounds; None: nowhere
     """
     seeds = seed.spawn(ENSEMBLES)
-    with _executor(min(workers, ENSEMBLES), posterior) as run:
+    with spread_over(min(workers, ENSEMBLES), posterior) as run:
         if memory is not None and memory.resumed is not None:
             ensembles = memory.resumed
         else:
@@ -198,26 +196,3 @@ def independence_move(proposal: Mixture) -> Any:  # noqa: ANN401  # an emcee mov
         return fresh, proposal.log_pdf(position) - proposal.log_pdf(fresh)
 
     return emcee.moves.MHMove(propose)
-
-
-_HELD: list[Target] = []  # of a worker process, which gets its posterior once and not with every task
-
-
-def _hold(posterior: Target) -> None:
-    _HELD[:] = [posterior]
-
-
-def _work(task: tuple[Callable[..., Ensemble], tuple[Any, ...]]) -> Ensemble:
-    function, arguments = task
-    return function(_HELD[0], *arguments)
-
-
-@contextmanager
-def _executor(workers: int, posterior: Target) -> Iterator[Callable[..., list[Ensemble]]]:
-    """Give a way to run one function on several argument lists, in processes where there is more than one worker."""
-    if workers <= 1:
-        yield lambda function, tasks: [function(posterior, *arguments) for arguments in tasks]
-        return
-    pool: Executor
-    with ProcessPoolExecutor(workers, get_context("spawn"), initializer=_hold, initargs=(posterior,)) as pool:
-        yield lambda function, tasks: list(pool.map(_work, [(function, arguments) for arguments in tasks]))

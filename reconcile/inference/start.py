@@ -26,6 +26,9 @@ from reconcile.inference.proposal import root_of
 # How far a start may lie from the mode of the prior, in its standard deviations, when a start is perturbed.
 _PERTURBED = 0.7
 _PERTURBED_STARTS = 3
+_CLIMBS = 2  # robust fits from which the posterior is climbed
+_SAME_PLACE = 0.2  # distance of two fits, in the priors' standard deviations, below which they are one
+_HOPELESS = 30.0  # cost above the best fit's at which another is forgotten
 _IMPOSSIBLE = 1e9  # stands for minus the log of zero, so that a search turns back
 _FLOOR, _NEIGHBOURS = 1e-7, 4  # share of a shot's peak below which a lattice point is dropped
 _PRIOR_DRAWS = 4000
@@ -59,12 +62,10 @@ def find_start(data: Data, rng: np.random.Generator) -> Start:
         shifted = begin + _PERTURBED * spread * rng.standard_normal(len(begin))
         if np.isfinite(rough.log_prior(shifted[None])[0][0]):
             fits.append(_robust_fit(rough, shifted, spread))
-    fits.sort(key=lambda fit: fit.cost)
+    fits = _different(sorted(fits, key=lambda fit: fit.cost), spread)[:_CLIMBS]
     # The robust fit knows the place better than the shape: its lattice holds that place, the next one the shape as well.
-    problem = on_lattice_of(rough, np.stack([fit.position for fit in fits[:2]]), 0.2 * fits[0].root, rng)
-    peaks = sorted(
-        (climb(problem.log_prob, fit.position, fit.root) for fit in fits[:2]), key=lambda peak: -peak.log_prob
-    )
+    problem = on_lattice_of(rough, np.stack([fit.position for fit in fits]), 0.2 * fits[0].root, rng)
+    peaks = sorted((climb(problem.log_prob, fit.position, fit.root) for fit in fits), key=lambda peak: -peak.log_prob)
     best = peaks[0]
     covariance = curvature(problem.log_prob, best.position, best.covariance)
     for _ in range(2):
@@ -87,6 +88,16 @@ class _Fit:
     cost: float
     position: Array
     root: Array
+
+
+def _different(fits: list[_Fit], spread: Array) -> list[_Fit]:
+    """Fits that ended elsewhere than a better one, in their order; hopeless ones left out."""
+    kept: list[_Fit] = []
+    for fit in fits:
+        near = any(np.abs((fit.position - other.position) / spread).max() < _SAME_PLACE for other in kept)
+        if not near and fit.cost - fits[0].cost < _HOPELESS:
+            kept.append(fit)
+    return kept
 
 
 def _prior_median(problem: Problem) -> Array:
