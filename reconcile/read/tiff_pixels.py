@@ -5,8 +5,9 @@ from __future__ import annotations
 import math
 import sys
 import zlib
+from io import BufferedReader
 from pathlib import Path
-from typing import Any, BinaryIO
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -54,7 +55,7 @@ def stored_numbers(path: Path, page: Page, order: str) -> NDArray[Any]:
     return np.moveaxis(whole[0], 2, 0) if inside > 1 else whole[..., 0]
 
 
-def _lay_tiles(stream: BinaryIO, page: Page, order: str, counts: tuple[int, ...], whole: NDArray[Any]) -> None:
+def _lay_tiles(stream: BufferedReader, page: Page, order: str, counts: tuple[int, ...], whole: NDArray[Any]) -> None:
     wide, high = page.tile or (page.columns, page.rows)
     across, down = math.ceil(page.columns / wide), math.ceil(page.rows / high)
     for number, (offset, count) in enumerate(zip(page.offsets, counts, strict=True)):
@@ -66,7 +67,7 @@ def _lay_tiles(stream: BinaryIO, page: Page, order: str, counts: tuple[int, ...]
         part[...] = _in_order(tile, page, order)[0, : part.shape[0], : part.shape[1]]
 
 
-def _fill(stream: BinaryIO, page: Page, offset: int, count: int, target: NDArray[np.uint8]) -> None:
+def _fill(stream: BufferedReader, page: Page, offset: int, count: int, target: NDArray[np.uint8]) -> None:
     """Fill `target` from one strip or tile."""
     stream.seek(offset)
     if page.compression not in DEFLATE:
