@@ -10,7 +10,7 @@ from numpy.typing import NDArray
 
 from reconcile.campaign.quantity import shown
 from reconcile.measure.measured import Array, Finding, Measured, Outline, Stroke, Unmeasurable
-from reconcile.measure.trace_later import Event, Original, as_copy, find_events, judge
+from reconcile.measure.trace_later import Event, Original, as_copy, choose, find_events, judge
 from reconcile.measure.trace_noise import (
     Baseline,
     Noise,
@@ -117,8 +117,9 @@ def measure_trace(time: Array, voltage: Array, setup: ProbeSetup) -> Finding:
     record = _prepared(np.asarray(time, dtype=np.float64), np.asarray(voltage, dtype=np.float64), setup)
     first = _first_pulse(record)
     later = _later(record, first)
-    collapse = next((event for event in later if event.odds > 0), None)
-    passed = [event for event in later if event is not collapse and (collapse is None or event.peak < collapse.peak)]
+    chosen = choose(later)
+    collapse = None if chosen is None else later[chosen]
+    passed = later[:chosen]
     measured, remarks = _of_first(record, first)
     front = None if collapse is None else _collapse_front(record, collapse)
     lifetime, more = _lifetime(record, first, collapse, front, passed)

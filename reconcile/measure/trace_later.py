@@ -17,6 +17,7 @@ _ECHO_SPREAD, _COLLAPSE_SPREAD = 0.5, 1.0  # sd of the logarithm
 _COLLAPSE_LEVEL = 1.3  # a collapse is about as loud as the first pulse
 _ECHO_MISFIT, _COLLAPSE_MISFIT = 0.1, 0.5
 _NEGATIVE_COLLAPSE = 0.02  # chance that a collapse is noticed by a tension first
+_LOUDER_LATER = 3.0  # in log odds, against a collapse that something later outdoes
 
 
 @dataclass(frozen=True, slots=True)
@@ -27,6 +28,7 @@ class Event:
     peak: int
     last: int
     height: float  # [V] signed, at the peak
+    loudness: float = 0.0  # over the first pulse, signed
     odds: float = 0.0  # logarithm of the odds for a collapse against an echo
 
 
@@ -88,7 +90,24 @@ def judge(event: Event, signal: Array, time: Array, original: Original) -> Event
     odds += _normal(misfit, math.hypot(_COLLAPSE_MISFIT, uncertain))
     odds -= _normal(misfit, math.hypot(_ECHO_MISFIT, uncertain))
     odds += math.log((_NEGATIVE_COLLAPSE if scale < 0 else 1 - _NEGATIVE_COLLAPSE) / 0.5)
-    return replace(event, odds=odds)
+    return replace(event, odds=odds, loudness=scale)
+
+
+def choose(events: list[Event]) -> int | None:
+    """Return which of the judged events is the first collapse; None where echoes alone explain them.
+
+    What comes before it is an echo of the first pulse; what comes after may be anything, but is hardly louder: a
+    rebounding bubble has lost most of its energy.
+    """
+    best, chosen = 0.0, None
+    for at, event in enumerate(events):
+        after = events[at + 1 :]
+        score = event.odds + sum(float(np.logaddexp(0.0, one.odds)) - math.log(2.0) for one in after)
+        if any(abs(one.loudness) > 1.5 * abs(event.loudness) for one in after):
+            score -= _LOUDER_LATER
+        if score > best:
+            best, chosen = score, at
+    return chosen
 
 
 def _normal(value: float, sd: float) -> float:
