@@ -19,9 +19,9 @@ from reconcile.invent.untidy import Blemishes, blemishes
 from reconcile.invent.waveforms import Probe, Recorder, Sound, first_pulse
 
 FRAMES, MAPS, SAMPLES = 32, 7, 3  # sound files of each, at most
-PARTICLES = 130  # laid on one micrograph
+PARTICLES = 160  # laid on one micrograph
 LARGEST_BUBBLE = 122.0  # [px]
-TYPICAL_PARTICLE = 18.0  # [px]
+TYPICAL_PARTICLE = 16.0  # [px]
 INTERVAL, BEFORE = 2e-9, 1e-6  # [s] between samples; of the record before the laser pulse
 WINDOWS = (12e-6, 16e-6, 20e-6, 24e-6, 32e-6, 40e-6, 50e-6, 64e-6, 100e-6)  # [s]
 RANGES = (0.01, 0.02, 0.05, 0.1, 0.2, 0.5, 1.0, 2.0)  # [V]
