@@ -50,7 +50,13 @@ def score(folder: Path) -> Score:
     gathered = gather(load(folder))
     target = EFFORTS["quick"]
     fitted = fit(
-        gathered, seed=1, target=target, workers=1, without=(), progress=silent, checkpoint=Checkpoint(None, "", resume=False)
+        gathered,
+        seed=1,
+        target=target,
+        workers=1,
+        without=(),
+        progress=silent,
+        checkpoint=Checkpoint(None, "", resume=False),
     )
     close_out = conclude(fitted, gathered, seed=1, target=target)
     truth = tomllib.loads((folder / "truth" / "truth.toml").read_text(encoding="utf-8"))
