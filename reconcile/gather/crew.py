@@ -7,7 +7,7 @@ import os
 import signal
 from collections import deque
 from collections.abc import Callable, Iterator, Sequence
-from concurrent.futures import FIRST_COMPLETED, Future, ProcessPoolExecutor, wait
+from concurrent.futures import FIRST_COMPLETED, Future, ProcessPoolExecutor, as_completed, wait
 from concurrent.futures.process import BrokenProcessPool
 from contextlib import contextmanager
 from types import TracebackType
@@ -119,7 +119,7 @@ class Crew(Generic[Job, Result]):
         if self._pool is None:
             try:
                 self._pool = _pool(self.workers)
-                self._pool.submit(_ready).result()
+                next(as_completed([self._pool.submit(_ready) for _ in range(self.workers)])).result()
             except (BrokenProcessPool, OSError, NotImplementedError):  # no semaphores, or a script without a main guard
                 self._stop()
                 self.workers = 1

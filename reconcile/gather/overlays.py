@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 import textwrap
 from collections.abc import Sequence
 from dataclasses import dataclass
@@ -24,6 +25,7 @@ Colour = tuple[int, int, int]
 WIDTH, HEIGHT = 640, 560  # px at most, the caption not counted
 MOST_BYTES = 60_000
 NARROWEST = 160  # px
+MOST_ENLARGED = 4.0
 _TEXT = 13  # px
 _INK, _PAPER = (25, 25, 25), (255, 255, 255)
 _MISSING = 255  # grey of points without a number
@@ -56,7 +58,9 @@ def draw_picture(picture: Numbers, outline: Outline, stem: Path | None) -> Path 
     """
     if stem is None:
         return None
-    scale = min(1.0, WIDTH / picture.shape[1], HEIGHT / picture.shape[0])
+    scale = min(WIDTH / picture.shape[1], HEIGHT / picture.shape[0])
+    if scale > 1:  # a small picture is enlarged by a whole number, so that its pixels stay even
+        scale = min(float(math.floor(scale)), MOST_ENLARGED)
     grey = _grey(picture)
     for levels in (48, 24, 12):
         canvas = _on_grey(grey, scale, levels, outline)
@@ -122,7 +126,7 @@ def _on_grey(grey: NDArray[np.uint8], scale: float, levels: int, outline: Outlin
     size = (max(1, round(columns * scale)), max(1, round(rows * scale)))
     image = Image.fromarray(grey)
     if size != image.size:
-        image = image.resize(size, Image.Resampling.BOX)
+        image = image.resize(size, Image.Resampling.BOX if scale < 1 else Image.Resampling.NEAREST)
     step = 256 // levels
     canvas = image.point([min(255, level // step * step + step // 2) for level in range(256)]).convert("RGB")
     draw = ImageDraw.Draw(canvas)
