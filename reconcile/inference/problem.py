@@ -12,7 +12,7 @@ from reconcile.campaign.readings import Gathered, Reading
 from reconcile.inference.coordinates import Anchor, Coordinates, Inputs
 from reconcile.inference.lattice import Index, Lattice, ShotTable
 from reconcile.inference.likelihood import Likelihood
-from reconcile.inference.model import TOUCHES, Array, Conditions, Expected, Exposures
+from reconcile.inference.model import REFERENCE_ABSORBED, TOUCHES, Array, Conditions, Expected, Exposures
 from reconcile.inference.priors import Believed, believed_inputs
 
 # Inputs that share in the physical cuts, so that they are sampled whatever the kinds.
@@ -183,7 +183,7 @@ class Problem:
         state = Expected(self.data.conditions, inputs, self._cuts)
         share = state.absorbed_share.max(axis=0)
         strongest = Expected(self.data.conditions, inputs, _last(self._cuts))
-        relative = strongest.absorbed / 1e3
+        relative = strongest.absorbed / REFERENCE_ABSORBED
         bubble = inputs["bubble_yield"] * relative ** inputs["bubble_yield_exponent"] * -np.expm1(-strongest.excess)
         over = np.maximum((bubble + strongest.shock_yield)[0] - CLOSURE, 0.0) / CLOSURE_SPREAD
         return np.where(share <= 1.0, -0.5 * over**2, -np.inf)

@@ -112,8 +112,11 @@ def test_one_seed_gives_the_same_numbers_whatever_the_workers(tmp_path: Path) ->
 
 def test_kinds_left_out_are_read_but_not_fitted(tmp_path: Path) -> None:
     craters = "Shot,Depth (um),u (um)\ns001,0.20,0.02\ns002,0.28,0.02\n"
-    diameters = '\n[[readings]]\nkind = "crater-diameter"\nfile = "d.csv"\nuncertainty = "0.5 um"\ncolumns = { shot = "Shot", value = "D (um)" }\n'
-    folder = write(tmp_path / "c", more=diameters, craters=craters)
+    more = (
+        '\n[[readings]]\nkind = "crater-diameter"\nfile = "d.csv"\nuncertainty = "0.5 um"\n'
+        'columns = { shot = "Shot", value = "D (um)" }\n'
+    )
+    folder = write(tmp_path / "c", more=more, craters=craters)
     (folder / "d.csv").write_text("Shot,D (um)\ns001,31\ns002,38\n", encoding="utf-8")
     _, results = close_out(folder, tmp_path / "out", without=("crater-diameter",))
     fitted = {reading["kind"]: reading["predicted"] is not None for reading in results["readings"]}
