@@ -40,7 +40,7 @@ _ABOVE_LATER = 6.0  # the same over a whole record
 _WINDOW = 0.15  # share of the travel time by which the arrival may differ: standoff, temperature, the shock's advance
 _WINDOW_EDGE = 0.12e-6  # [s] beside that share
 _EARLIEST_COLLAPSE = 2e-6  # [s] after the first pulse; a bubble of 10 µm in water lives as long
-_QUIET_BEFORE = 3e-6  # [s] of quiet record before a pulse on which its baseline rests
+_QUIET = 3e-6  # [s] of quiet record on either side of a pulse on which its baseline rests
 
 
 @dataclass(frozen=True, slots=True)
@@ -190,7 +190,7 @@ def _measured_first(record: _Record, noticed: int, loud: tuple[int, int] | None)
     low = 0.5 * record.noise.sd / math.sqrt(width)
     rough = find_lobe(record.signal, noticed, reach, width, low)
     quiet = _quiet(record, min(noticed, rough.first) - width, loud)
-    baseline = fit_baseline(time, record.voltage, quiet)
+    baseline = fit_baseline(time, record.voltage, np.concatenate((quiet, _quiet_after(record, rough.last))))
     signal = record.voltage - baseline.at(time)
     noise = noise_of(signal[quiet], record.noise.step)
     lobe = find_lobe(signal, noticed, reach, width, 0.5 * noise.sd / math.sqrt(width))
@@ -218,7 +218,7 @@ def _slope_u(front: Front, baseline: Baseline) -> float:
 def _quiet(record: _Record, until: int, loud: tuple[int, int] | None) -> Indices:
     """Return the samples before a pulse that hold neither it nor the pick-up, the nearest stretch of them."""
     begin = 0 if loud is None else loud[1] + 1
-    begin = max(begin, until - math.ceil(_QUIET_BEFORE / record.step))
+    begin = max(begin, until - math.ceil(_QUIET / record.step))
     quiet = np.arange(begin, max(until, begin))
     if quiet.size < 24 and loud is not None:  # the pick-up fills the time of flight: what lies before the laser pulse
         quiet = np.concatenate((np.arange(max(0, loud[0])), quiet))
@@ -229,6 +229,18 @@ def _quiet(record: _Record, until: int, loud: tuple[int, int] | None) -> Indices
             "Start the record earlier, or put the probe farther from the site.",
         )
     return quiet
+
+
+def _quiet_after(record: _Record, last: int) -> Indices:
+    """Return samples behind a pulse that hold nothing else: drift and hum under it are then bridged, not extrapolated."""
+    step = record.step
+    begin = last + math.ceil(max(0.3e-6, 20 * record.setup.response_time) / step)
+    stretch = np.arange(min(begin, record.time.size), min(begin + math.ceil(_QUIET / step), record.time.size))
+    loud = np.flatnonzero(np.abs(record.filtered[stretch]) > _ABOVE * record.level)
+    if loud.size:
+        around = math.ceil(max(0.1e-6, 8 * record.setup.response_time) / step)
+        stretch = stretch[: max(int(loud[0]) - around, 0)]
+    return stretch
 
 
 def _of_first(record: _Record, first: _First) -> tuple[list[Measured], list[str]]:
@@ -252,13 +264,13 @@ def _of_first(record: _Record, first: _First) -> tuple[list[Measured], list[str]
 
 
 def _top_u(record: _Record, first: _First, height: float) -> float:
-    """Return the uncertainty [V] of the fitted pulse's height: noise and baseline over it, and how far samples lie off."""
+    """Return the uncertainty [V] of the fitted height: noise and baseline, how far samples lie off, 1 % for its form."""
     begin, end = first.ends
     fitted = first.front.at(record.time[begin : end + 1])
     share = first.pulse.noise.of_sum(fitted) / max(float(fitted @ fitted), 1e-30) ** 2
     near = slice(max(first.pulse.lobe.peak - 1, 0), first.pulse.lobe.peak + 2)
     off = float(np.mean(first.pulse.signal[near] - first.front.at(record.time[near])))
-    return math.hypot(height * math.sqrt(share), first.baseline.u(first.front.time), off)
+    return math.hypot(height * math.sqrt(share), first.baseline.u(first.front.time), off, 0.01 * height)
 
 
 # --- after it ---------------------------------------------------------------------------------------------------
@@ -298,10 +310,12 @@ def _collapse_front(record: _Record, event: Event) -> Front | None:
         return None
     baseline = fit_baseline(record.time, record.voltage, before)
     signal = record.voltage - baseline.at(record.time)
-    low = 0.5 * record.noise.sd / math.sqrt(width)
-    lobe = find_lobe(signal, event.first, event.last - event.first + 12 * width + 4, width, low)
+    noise = noise_of(signal[before], record.noise.step)
+    lobe = find_lobe(
+        signal, event.first, event.last - event.first + 12 * width + 4, width, 0.5 * noise.sd / math.sqrt(width)
+    )
     smear = smear_of_path(setup.standoff)
-    front = fit_front(Pulse(record.time, signal, record.clipped, lobe, record.noise, setup.response_time, smear))
+    front = fit_front(Pulse(record.time, signal, record.clipped, lobe, noise, setup.response_time, smear))
     return None if front is None else replace(front, u=math.hypot(front.u, _slope_u(front, baseline)))
 
 

@@ -38,7 +38,7 @@ class Noise:
 
 @dataclass(frozen=True, slots=True)
 class Baseline:
-    """A smooth curve through the quiet stretch before a pulse."""
+    """A smooth curve through the quiet stretches beside a pulse."""
 
     coefficients: Array  # (k,) [V]
     covariance: Array  # (k, k) [V²]
@@ -119,7 +119,7 @@ def pick_up(time: Array, deviation: Array, level: float, trigger: float, until: 
 
 
 def fit_baseline(time: Array, voltage: Array, quiet: NDArray[np.intp]) -> Baseline:
-    """Fit the baseline to the quiet samples: a line, a parabola, or a line and one hum, whichever the data ask for.
+    """Fit the baseline to the quiet samples: a polynomial, or a line and one hum, whichever the data ask for.
 
     The choice is by the Bayesian information criterion (Schwarz 1978, Ann. Statist. 6, 461).
 
@@ -134,7 +134,7 @@ def fit_baseline(time: Array, voltage: Array, quiet: NDArray[np.intp]) -> Baseli
     centre, span = float(t.mean()), float(np.ptp(t)) or 1.0
     x = (t - centre) / span
     best: tuple[float, Array, Array, float | None] | None = None
-    for degree, cycles in [(0, None), (1, None), (2, None), (1, _hum(x, v))]:
+    for degree, cycles in [(0, None), (1, None), (2, None), (3, None), (1, _hum(x, v))]:
         free = degree + 1 + (4 if cycles else 0)  # a frequency that was looked for counts for two
         if x.size < free + 4 or (cycles is None and degree == 1 and best is None):
             continue
