@@ -7,7 +7,7 @@ a surface fitted to the bottom: a single deepest point would follow the noise.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from scipy import ndimage
@@ -241,7 +241,7 @@ def _excluded(surface: Levelled, distance: Array, edge: float, radius: float) ->
     high = np.flatnonzero(np.abs(mean) > max(0.2 * surface.noise, 3 * float(np.median(rings.sd)) / np.sqrt(width)))
     at = min(int(high[-1]) + width if high.size else 0, rings.x.size - 1)
     begins = max(rings.x[at] / radius, min(1.3 * edge, ends[1] / radius))
-    left = float(abs(mean[at])) if high.size and at == rings.x.size - 1 else 0.0
+    left = float(abs(mean[at])) if high.size else 0.0
     return np.asarray(distance < begins), left
 
 
@@ -249,7 +249,7 @@ def _edge(surface: Levelled, shape: _Shape, distance: Array) -> Edge:
     """Return where the removed area ends, in units of the outline's own distance."""
     outwards = (distance - 1) * shape.area_radius
     edge = find_edge(outwards, surface.height, shape.area_radius, surface.noise, surface.together)
-    return Edge(1 + edge.at / shape.area_radius, edge.u / shape.area_radius, edge.slope, edge.step)
+    return replace(edge, at=1 + edge.at / shape.area_radius, u=edge.u / shape.area_radius)
 
 
 def _finding(surface: Levelled, crater: _Crater, pixel_pitch: float) -> Finding:
@@ -257,8 +257,9 @@ def _finding(surface: Levelled, crater: _Crater, pixel_pitch: float) -> Finding:
     inside = (distance < edge.at) & np.isfinite(surface.height)
     level_u = float(np.hypot(surface.level_u(distance < edge.at), crater.rim_left))
     depth, bottom_u = _bottom(surface, shape, distance, edge.at)
-    # A point is a mean over its width: of a paraboloid d/(6 R²) less than its deepest place, were it all of the pitch.
+    # A point may be a sample or a mean over the pitch, which of a paraboloid is d/(6 R²) less deep: half of it is taken.
     raster_u = depth / (12 * (edge.at * shape.area_radius) ** 2)
+    depth += raster_u
     reference_u = np.hypot(surface.level_u(distance < BOTTOM * edge.at), crater.rim_left)
     depth_u = float(np.sqrt(bottom_u**2 + reference_u**2 + raster_u**2))
     if depth < LIMIT * depth_u:
@@ -303,17 +304,25 @@ def _bottom(surface: Levelled, shape: _Shape, distance: Array, edge: float) -> t
     reach = BOTTOM * edge * shape.area_radius
     y, x = (rows - shape.row) / reach, (columns - shape.column) / reach
     values = surface.height[inside]
-    paraboloid = np.stack([np.ones_like(x), x, y, x * x, x * y, y * y], axis=1)
-    fits = [_fitted(design, values) for design in (paraboloid, np.column_stack([paraboloid, (x * x + y * y) ** 2]))]
+    full = _bottom_terms(x, y)
+    fits = [_fitted(design, values) for design in (full[:, :-1], full)]
     (_, _, _, plain_sd), (design, solution, covariance, sd) = fits
     n = values.size / surface.together
     if not (sd < plain_sd and n * np.log((plain_sd / max(sd, 1e-300)) ** 2) > np.log(n) + 9):
         design, solution, covariance, sd = fits[0]
-    surface_fit = design @ solution
-    deepest = int(np.argmin(surface_fit))
-    terms = design[deepest]
-    u = float(np.sqrt(terms @ covariance @ terms * surface.together))
-    return -float(surface_fit[deepest]), u
+    deepest = int(np.argmin(design @ solution))
+    # The deepest place lies between points: a finer raster around the deepest of them.
+    step = np.arange(-20, 21) / 20 / reach
+    fine_y, fine_x = (grid.ravel() for grid in np.meshgrid(y[deepest] + step, x[deepest] + step, indexing="ij"))
+    terms = _bottom_terms(fine_x, fine_y)[:, : solution.size]
+    lowest = terms[int(np.argmin(terms @ solution))]
+    return -float(lowest @ solution), float(np.sqrt(lowest @ covariance @ lowest * surface.together))
+
+
+def _bottom_terms(x: Array, y: Array) -> Array:
+    """Return the terms of a paraboloid and of its fourth power: (n, 7)."""
+    square = x * x + y * y
+    return np.stack([np.ones_like(x), x, y, x * x, x * y, y * y, square * square], axis=1)
 
 
 def _fitted(design: Array, values: Array) -> tuple[Array, Array, Array, float]:

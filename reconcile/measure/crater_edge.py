@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from scipy.special import ndtr
@@ -15,8 +15,11 @@ BLURS = (0.3, 0.45, 0.7, 1.0, 1.5)  # points; standard deviations by which instr
 SURE = 5.0  # standard uncertainties by which a step must stand out
 WINDOW = 0.2  # of the radius, on either side of the edge
 LEAST_WINDOW = 4.0  # points
+OUTER = (0.35, 0.7)  # of twice that, outside
+RIDGE = 1e-9  # of the scaled normal equations: a step at the window's end has no parabola beyond it
+UNRESOLVED = 0.15  # points: how far a step too low to be told apart from the slope beside it moves the crossing
 PARTIAL = 0.25  # of a step: how far below the surround its upper end may seem to lie
-FLOOR = 0.02  # points: what the raster leaves of a step's place however little noise there is
+FLOOR = 0.008  # points: what the raster leaves of a step's place however little noise there is
 
 
 @dataclass(frozen=True, slots=True)
@@ -27,6 +30,7 @@ class Edge:
     u: float  # its standard uncertainty, that of the surround's level left out
     slope: float  # of the profile there [height / point]
     step: bool  # a step stands there
+    misfit: float  # of the fitted profile, mean squared over that expected
 
 
 @dataclass(frozen=True, slots=True)
@@ -46,7 +50,7 @@ class _Step:
     blur: float
     solution: Array  # inner 1, x, x²; then what the outer one differs by, about `at`
     covariance: Array
-    chi2: float
+    misfit: float  # mean squared, over that expected
 
 
 def find_edge(distance: Array, height: Array, radius: float, noise: float, together: float) -> Edge:
@@ -72,22 +76,33 @@ def find_edge(distance: Array, height: Array, radius: float, noise: float, toget
     """
     profile = ring_means(distance, height, (-0.6 * radius, max(0.8 * radius, 8.0)), noise * np.sqrt(together))
     about = _rough_crossing(profile)
-    reach = max(LEAST_WINDOW, WINDOW * radius)
-    near = np.abs(profile.x - about) <= reach
-    if np.count_nonzero(near) < 14:
+    inner, outer = max(LEAST_WINDOW, WINDOW * radius), max(LEAST_WINDOW, 2 * WINDOW * radius)
+    edges = [_edge(_cut(profile, about - inner, about + share * outer), about, 0.6 * inner) for share in OUTER]
+    # Rims fall off over lengths of their own: two windows outside tell how much the edge depends on that.
+    best, other = sorted(edges, key=lambda one: one.misfit)
+    return replace(best, u=float(np.hypot(best.u, 0.3 * (best.at - other.at))))
+
+
+def _cut(profile: Profile, start: float, end: float) -> Profile:
+    near = (profile.x >= start) & (profile.x <= end)
+    if np.count_nonzero(near) < 12:
         raise Unmeasurable(
             "too few points along the edge of the crater",
             "heights on most of the edge",
             "Measure the site again, with more light or a finer pitch.",
         )
-    window = Profile(profile.x[near], profile.h[near], profile.sd[near])
-    step, place_u = _best_step(window, about, 0.6 * reach)
+    return Profile(profile.x[near], profile.h[near], profile.sd[near])
+
+
+def _edge(window: Profile, about: float, reach: float) -> Edge:
+    step, place_u = _best_step(window, about, reach)
     jump, jump_u = float(step.solution[3]), float(np.sqrt(step.covariance[3, 3]))
     inner = float(step.solution[0])
     if jump > SURE * jump_u and inner < 0 and inner + jump > -PARTIAL * jump:
         slope = jump / (step.blur * np.sqrt(2 * np.pi)) + abs(float(step.solution[1]))
-        return Edge(step.at, float(np.hypot(place_u, FLOOR)), slope, True)
-    return _crossing(step, reach)
+        return Edge(step.at, float(np.hypot(place_u, FLOOR)), slope, True, step.misfit)
+    crossing = _crossing(step, reach)
+    return replace(crossing, u=float(np.hypot(crossing.u, min(place_u, UNRESOLVED))))
 
 
 def ring_means(distance: Array, height: Array, ends: tuple[float, float], noise: float) -> Profile:
@@ -131,41 +146,56 @@ def _rough_crossing(profile: Profile) -> float:
 
 
 def _basis(x: Array, blur: float) -> Array:
-    """Return 1, x, x² and the same begun at 0, blurred by a Gaussian: (n, 6)."""
+    """Return 1, x, x² and the same begun at 0, blurred by a Gaussian, along a last axis of 6."""
     rise, bell = ndtr(x / blur), np.exp(-0.5 * (x / blur) ** 2) / np.sqrt(2 * np.pi)
     line = x * rise + blur * bell
     square = (x * x + blur**2) * rise + blur * x * bell
-    return np.stack([np.ones_like(x), x, x * x + blur**2, rise, line, square], axis=1)
+    return np.stack([np.ones_like(x), x, x * x + blur**2, rise, line, square], axis=-1)
 
 
 def _best_step(window: Profile, about: float, reach: float) -> tuple[_Step, float]:
     """Return the likeliest place and blur of a step, and the standard uncertainty of the place."""
-    offsets = np.arange(-reach, reach + 0.01, 0.25)
-    best = min((_likeliest(window, about + offset) for offset in offsets), key=lambda one: one.chi2)
-    fine = [_step(window, best.at + offset, best.blur) for offset in np.arange(-0.25, 0.26, 0.025)]
-    best = min(fine, key=lambda one: one.chi2)
-    # The uncertainty: as far as the misfit grows by that of one standard uncertainty.
-    usual = max(best.chi2 / max(window.x.size - 8, 1), 1.0)
-    for offset in (0.1, 0.2, 0.4, 0.8, 1.6, 3.2):
-        growth = [_likeliest(window, best.at + side * offset).chi2 - best.chi2 for side in (-1, 1)]
-        if min(growth) > usual:
-            return best, offset * float(np.sqrt(usual / np.mean(growth)))
+    places = about + np.arange(-reach, reach + 0.01, 0.25)
+    places = places[(places > window.x[0] + 1) & (places < window.x[-1] - 1)]
+    misfits = np.array([_misfits(window, places, blur) for blur in BLURS])
+    blur = BLURS[int(np.argmin(misfits.min(axis=1)))]
+    about = float(places[int(np.argmin(misfits.min(axis=0)))])
+    places = about + np.arange(-0.3, 0.31, 0.02)
+    misfit = _misfits(window, places, blur)
+    at = float(places[int(np.argmin(misfit))])
+    best = _step(window, at, blur)
+    # The uncertainty: how far the place moves until the misfit has grown by that of one standard uncertainty.
+    usual = max(best.misfit, 1.0)
+    distances = np.array([0.05, 0.1, 0.2, 0.4, 0.8, 1.6, 3.2])
+    sides = np.array([_misfits(window, at + np.append(-distances, distances), one) for one in BLURS]).min(axis=0)
+    growth = sides.reshape(2, -1) - misfit.min()
+    for distance, both in zip(distances, growth.T, strict=True):
+        if both.min() > usual:
+            return best, float(distance * np.sqrt(usual / both.mean()))
     return best, reach
 
 
-def _likeliest(window: Profile, at: float) -> _Step:
-    return min((_step(window, at, blur) for blur in BLURS), key=lambda one: one.chi2)
+def _misfits(window: Profile, places: Array, blur: float) -> Array:
+    """Return the sum of squared misfits of a step at each of several places."""
+    design = _basis(window.x[None, :] - places[:, None], blur) / window.sd[:, None]
+    target = window.h / window.sd
+    scale = np.sqrt(np.sum(design**2, axis=1)) + 1e-300
+    design = design / scale[:, None, :]
+    normal = np.swapaxes(design, 1, 2) @ design + RIDGE * np.eye(design.shape[2])
+    right = np.swapaxes(design, 1, 2) @ target
+    solution = np.linalg.solve(normal, right[..., None])[..., 0]
+    residual = target - np.einsum("mnk,mk->mn", design, solution)
+    return np.asarray(np.sum(residual**2, axis=1))
 
 
 def _step(window: Profile, at: float, blur: float) -> _Step:
     design = _basis(window.x - at, blur) / window.sd[:, None]
     target = window.h / window.sd
-    normal = design.T @ design
-    scale = np.sqrt(np.diag(normal)) + 1e-300
-    inverse = np.linalg.pinv(normal / np.outer(scale, scale), rcond=1e-10) / np.outer(scale, scale)
+    scale = np.sqrt(np.sum(design**2, axis=0)) + 1e-300
+    inverse = np.linalg.inv((design / scale).T @ (design / scale) + RIDGE * np.eye(scale.size)) / np.outer(scale, scale)
     solution = inverse @ (design.T @ target)
-    chi2 = float(np.sum((target - design @ solution) ** 2))
-    return _Step(at, blur, solution, inverse * max(chi2 / max(target.size - 8, 1), 1.0), chi2)
+    misfit = float(np.sum((target - design @ solution) ** 2)) / max(target.size - 8, 1)
+    return _Step(at, blur, solution, inverse * max(misfit, 1.0), misfit)
 
 
 def _crossing(step: _Step, reach: float) -> Edge:
@@ -183,4 +213,4 @@ def _crossing(step: _Step, reach: float) -> Edge:
     slope = max(float(solution[1] + 2 * solution[2] * at), 1e-300)
     terms = np.array([1.0, at, at * at])
     u = float(np.sqrt(terms @ covariance @ terms)) / slope
-    return Edge(step.at + at, float(np.hypot(min(u, reach), FLOOR)), slope, False)
+    return Edge(step.at + at, float(np.hypot(min(u, reach), FLOOR)), slope, False, step.misfit)
