@@ -150,17 +150,20 @@ def verb_closeout(args: argparse.Namespace) -> int:
 def verb_measure(args: argparse.Namespace) -> int:
     """Read and measure only; print what was read and what was refused."""
     _one_thread_each()
+    from tempfile import TemporaryDirectory
+
     from reconcile.campaign.files import check_output
     from reconcile.campaign.manifest import load
     from reconcile.gather import gather
     from reconcile.report.summary import gathered_lines
     from reconcile.report.write import write_gathered
 
-    with _Bars(args.quiet) as progress:
+    drawings = TemporaryDirectory(prefix="reconcile-", ignore_cleanup_errors=True)
+    with _Bars(args.quiet) as progress, drawings as overlays:
         campaign = load(args.campaign)
         folder = args.out or _measured_folder(campaign.name)
         check_output(folder, campaign.folder)
-        gathered = gather(campaign, workers=args.workers, progress=progress)
+        gathered = gather(campaign, workers=args.workers, progress=progress, overlays=Path(overlays))
         written = write_gathered(gathered, folder)
     _say(*gathered_lines(gathered, written))
     return DONE

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from pathlib import Path
+from tempfile import TemporaryDirectory
 
 from reconcile.campaign.files import check_output, whole_folder
 from reconcile.campaign.manifest import load
@@ -49,25 +50,26 @@ def closeout(  # reason: the options of one verb
     campaign = load(path)
     folder = out if out is not None else Path("reports") / campaign.name
     check_output(folder, campaign.folder)
-    gathered = gather(campaign, workers=workers, progress=progress)
-    target = EFFORTS[effort]
-    mark = fingerprint(gathered, seed, target, without)
-    checkpoint = Checkpoint(folder.with_name(f"{folder.name}.unfinished.npz"), mark, resume=resume)
-    fitted = fit(
-        gathered,
-        seed=seed,
-        target=target,
-        workers=workers,
-        without=without,
-        progress=progress,
-        checkpoint=checkpoint,
-    )
-    progress("judging", 0, 0)
-    close_out = conclude(fitted, gathered, seed=seed, target=target, workers=workers)
-    progress("writing", 0, 0)
-    place = whole_folder(folder)
-    with place as staging:
-        write(close_out, staging)
-    checkpoint.discard()
+    with TemporaryDirectory(prefix="reconcile-", ignore_cleanup_errors=True) as drawings:
+        gathered = gather(campaign, workers=workers, progress=progress, overlays=Path(drawings))
+        target = EFFORTS[effort]
+        mark = fingerprint(gathered, seed, target, without)
+        checkpoint = Checkpoint(folder.with_name(f"{folder.name}.unfinished.npz"), mark, resume=resume)
+        fitted = fit(
+            gathered,
+            seed=seed,
+            target=target,
+            workers=workers,
+            without=without,
+            progress=progress,
+            checkpoint=checkpoint,
+        )
+        progress("judging", 0, 0)
+        close_out = conclude(fitted, gathered, seed=seed, target=target, workers=workers)
+        progress("writing", 0, 0)
+        place = whole_folder(folder)
+        with place as staging:
+            write(close_out, staging)
+        checkpoint.discard()
     assert place.final is not None
     return close_out, place.final, place.message

@@ -276,32 +276,6 @@ def test_a_decision_on_a_refused_shot_is_no_mistake(tmp_path):
 
 # --- files ------------------------------------------------------------------------------------------------------
 
-FRAMES = '\n[[readings]]\nkind = "shadowgraph"\npixel_pitch = "1.85 um ± 0.02 um"\n'
-
-
-def frames(folder):
-    (folder / "frames").mkdir(parents=True)
-    for name in ("s001_800ns.png", "s002_1600ns.png", "background.png"):
-        (folder / "frames" / name).write_bytes(b"\x89PNG")
-
-
-def test_files_that_are_not_read_yet_are_refused_by_name(tmp_path):
-    frames(tmp_path)
-    found = gathered(write(tmp_path, more=FRAMES + 'files = "frames/{shot}_{delay}ns.png"\n'))
-    assert [refused.source for refused in found.refused] == ["frames/s001_800ns.png", "frames/s002_1600ns.png"]
-    assert all("not read yet by this version" in refused.reason for refused in found.refused)
-    assert found.unasked == ("frames/background.png",)
-
-
-def test_a_list_of_files_is_followed(tmp_path):
-    frames(tmp_path)
-    (tmp_path / "list.csv").write_text("Nr,Image\ns001,s001_800ns.png\ns002,s9.png\n", encoding="utf-8")
-    more = 'list = { file = "list.csv", columns = { shot = "Nr", path = "Image" }, folder = "frames" }\n'
-    found = gathered(write(tmp_path, more=FRAMES + more + 'background = "frames/background.png"\n'))
-    assert [refused.source for refused in found.refused] == ["list.csv!line 3", "frames/s001_800ns.png"]
-    assert found.unasked == ("frames/s002_1600ns.png",)
-    assert "list.csv" in [file.path for file in found.files]
-
 
 def test_no_pattern_looks_into_an_output_folder(tmp_path):
     folder = write(tmp_path, ('"craters.csv"', '"**craters*.csv"'))

@@ -2,30 +2,36 @@
 
 from __future__ import annotations
 
+from pathlib import Path
+
 from reconcile.campaign.campaign import Campaign, Table
 from reconcile.campaign.kinds import KINDS
 from reconcile.campaign.patterns import matching, unasked
 from reconcile.campaign.progress import Progress, silent
 from reconcile.campaign.readings import Gathered, Reading
 from reconcile.campaign.refusal import Place, Refusal
-from reconcile.campaign.schema import FILE_KINDS, table_columns
+from reconcile.campaign.schema import table_columns
 from reconcile.gather.collected import Collected, Names, same_source, spreadsheets
 from reconcile.gather.decisions import decided, read_decisions
-from reconcile.gather.images import refuse_files
 from reconcile.gather.log import Log, read_log
+from reconcile.gather.pictures import Pictures
 from reconcile.gather.sizes import SizeTable
+from reconcile.gather.sources import find_sources
 from reconcile.gather.values import Known, read_values
 from reconcile.read.tables import read_table
 
 
-def gather(campaign: Campaign, *, workers: int = 1, progress: Progress | None = None) -> Gathered:
-    """Read the log and every table of readings.
+def gather(
+    campaign: Campaign, *, workers: int = 1, progress: Progress | None = None, overlays: Path | None = None
+) -> Gathered:
+    """Read the log and every table of readings; measure every image, trace and map.
 
     Parameters
     ----------
     campaign : the manifest
-    workers : processes; tables are read in this one, whatever the number
-    progress : told of each table; None: nobody is
+    workers : processes that measure files; spreadsheets are read in this one. Never changes a number
+    progress : told of the tables read, and of each table's files measured; None: nobody is
+    overlays : existing folder into which what was found is drawn, a picture a file; None: nothing is drawn
 
     Returns
     -------
@@ -35,8 +41,10 @@ def gather(campaign: Campaign, *, workers: int = 1, progress: Progress | None = 
     Raises
     ------
     Refusal
-        The log, or a file that the manifest names, cannot be read as a whole; a pattern matches nothing; a decision is
-        about something unknown; or every reading was refused.
+        The log, or a file that the manifest names, cannot be read as a whole; a pattern matches nothing; a table of
+        files lacks what it needs to be measured; a decision is about something unknown; or every reading was refused.
+    OSError
+        A drawing cannot be written.
     """
     progress = progress or silent
     collected = Collected()
@@ -49,11 +57,16 @@ def gather(campaign: Campaign, *, workers: int = 1, progress: Progress | None = 
         collected.asked.update(
             spreadsheets(campaign, file, Place(campaign.log.place.file, key="probe.sensitivity_file"))
         )
-    readings: list[Reading] = []
+    sources = find_sources(campaign, known, collected)
+    found: dict[int, list[Reading]] = {}
     for number, table in enumerate(campaign.tables):
         progress("reading", number, len(campaign.tables))
-        readings.extend(_read(campaign, table, known, collected))
+        if number not in sources:
+            found[number] = _read(campaign, table, known, collected)
     progress("reading", len(campaign.tables), len(campaign.tables))
+    pictures = Pictures(campaign, known, collected, overlays)
+    found |= pictures.measure(sources, workers, progress)
+    readings = [reading for number in sorted(found) for reading in found[number]]
     decisions = read_decisions(campaign, known, readings, collected)
     shots, kept = decided(log, readings, decisions)
     if not kept and collected.refused_readings:
@@ -72,6 +85,7 @@ def gather(campaign: Campaign, *, workers: int = 1, progress: Progress | None = 
         decisions=decisions,
         files=tuple(collected.files.values()),
         unasked=unasked(campaign.folder, collected.asked),
+        overlays=pictures.drawn,
     )
 
 
@@ -81,9 +95,6 @@ def _first_reading(collected: Collected) -> str:
 
 
 def _read(campaign: Campaign, table: Table, known: Known, collected: Collected) -> list[Reading]:
-    if table.kind in FILE_KINDS:
-        refuse_files(campaign, table, collected)
-        return []
     readings: list[Reading] = []
     sizes = None if table.kind in KINDS else SizeTable(table, known, collected)
     seen: set[object] = set()

@@ -120,7 +120,6 @@ def _numbers(  # reason: the layout's parts one by one
             skipinitialspace=True,
             dtype=np.float64,
             engine="c",
-            float_precision="high",
         )
     except (ValueError, OverflowError):  # a parser's error is a ValueError
         raise _not_a_number(text, name, delimiter, decimal, at, first) from None
