@@ -10,6 +10,7 @@ from scipy import ndimage
 
 from reconcile.measure.circle import Fit, fit_circle, fit_line
 from reconcile.measure.edges import Edges, find_edges
+from reconcile.measure.fringes import fringe_shift, mean_profile
 from reconcile.measure.measured import Array, Unmeasurable
 from reconcile.measure.scene import Cap, Scene
 
@@ -49,6 +50,7 @@ class Arc:
     points: Array  # (profiles, 2) column, row of each edge
     used: Mask  # (profiles,)
     saturated: float  # fraction of the outline in front of saturated light
+    fringes: float  # amplitude of diffraction fringes beside the outline, as a fraction of its step; 0: none seen
 
 
 def refine_contact(scene: Scene, cap: Cap | None) -> Contact:
@@ -146,11 +148,22 @@ def fit_arc(contact: Contact, cap: Cap, full: Mask | None) -> Arc:
         radii, turned = edges.position[good], angles[kept][good]
         points = place[:2] + radii[:, None] * np.column_stack([np.cos(turned), np.sin(turned)])
         expected = (0.0, float(np.hypot(_UNDECIDED * place[2], contact.u_height)))
-        fit = fit_circle(points, place, expected)
+        step = np.median((edges.bright - edges.dark)[good])
+        # A step's place from samples of independent noise, by its information: the integral of its slope squared. Of
+        # the noise in the light, the part that photons would leave halfway down the step.
+        halfway = np.sqrt(max(1.0 - 0.5 * step, 0.25))
+        least = halfway * scene.noise / step * np.sqrt(2.0 * np.sqrt(np.pi) * edges.width / seen.rays)
+        fit = fit_circle(points, place, expected, float(least))
         place, width = fit.values, edges.width
         if not 2.0 < place[2] < 8.0 * max(scene.flat.shape):
             raise _no_outline()
-    return _judged(contact, fit, edges, good, points, origin, float(1.0 - np.mean(saturated[clear] < 0.2)))
+    steps = (edges.bright - edges.dark)[good][:, None]
+    longer = np.arange(max(place[2] - 4.0 * width - 3.0, 0.5), place[2] + 8.0 * width + 8.0, _STEP)
+    profiles = (seen.profiles(longer, kept)[good] - edges.dark[good][:, None]) / steps
+    offset, mean = mean_profile(profiles, longer, edges.position[good])
+    noise = 1.25 * scene.noise / float(step) / float(np.sqrt(seen.rays * good.sum()))
+    fringes = fringe_shift(offset, mean, edges.width, noise)
+    return _judged(contact, fit, edges, good, points, origin, float(np.mean(saturated[clear] >= 0.2)), fringes)
 
 
 def _angles(place: Array, contact: Contact, blur: float) -> tuple[Array, int]:
@@ -244,7 +257,14 @@ def _enough(angles: Array, clear: Mask, kept: Mask) -> None:
 
 
 def _judged(
-    contact: Contact, fit: Fit, edges: Edges, good: Mask, points: Array, origin: Array, saturated: float
+    contact: Contact,
+    fit: Fit,
+    edges: Edges,
+    good: Mask,
+    points: Array,
+    origin: Array,
+    saturated: float,
+    fringes: tuple[float, float],
 ) -> Arc:
     """Turn the fitted circle into a radius with its uncertainty."""
     along, away = _directions(contact.scene.slope)
@@ -260,13 +280,14 @@ def _judged(
     # A blurred disc passes half its step inside its rim, since more light than dark lies around each point of the rim:
     # blurring moves a level line by curvature times half the variance, as diffusion does.
     shift = edges.width**2 / (2.0 * half_level)
-    u = np.sqrt(fit.covariance[2, 2] + edges.shape**2 + (0.25 * shift) ** 2)
+    # The ripple's form is a guess: its shift counts in part as uncertainty.
+    u = np.sqrt(fit.covariance[2, 2] + edges.shape**2 + (0.15 * shift) ** 2 + (0.15 * fringes[0]) ** 2)
     return Arc(
         centre=origin + x * along + y * away,
         height=y,
         u_height=float(np.hypot(np.sqrt(fit.covariance[1, 1]), contact.u_height)),
         half_level=half_level,
-        radius=half_level + shift,
+        radius=half_level + shift + fringes[0],
         u=float(u),
         width=edges.width,
         coverage=coverage,
@@ -276,6 +297,7 @@ def _judged(
         points=origin + points[:, :1] * along + points[:, 1:] * away,
         used=used,
         saturated=saturated,
+        fringes=fringes[1],
     )
 
 

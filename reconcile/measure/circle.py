@@ -23,7 +23,7 @@ class Fit:
     scatter: float  # robust standard deviation of a residual
 
 
-def fit_circle(points: Array, start: Array, level: tuple[float, float] | None = None) -> Fit:
+def fit_circle(points: Array, start: Array, level: tuple[float, float] | None = None, least: float = 0.0) -> Fit:
     """Fit a circle by the distances of the points from it, not by their squares' differences.
 
     Parameters
@@ -31,6 +31,7 @@ def fit_circle(points: Array, start: Array, level: tuple[float, float] | None = 
     points : array (points, 2), neighbours in sequence
     start : array (3,), first guess of the centre's two coordinates and the radius
     level : the second coordinate that the centre is expected to have and that expectation's standard deviation
+    least : standard deviation of a point that its noise alone gives: a few points can scatter less by chance
 
     Returns
     -------
@@ -45,7 +46,10 @@ def fit_circle(points: Array, start: Array, level: tuple[float, float] | None = 
         distance = np.maximum(np.hypot(arm[:, 0], arm[:, 1]), 1e-9)
         residuals = distance - values[2]
         scatter = _scatter(residuals)
-        weights = _biweight(residuals, scatter if turn > 2 else 3.0 * scatter)
+        # At first the radius may be off by more than the points scatter.
+        weights = (
+            _biweight(residuals, scatter) if turn > 3 else _biweight(residuals - np.median(residuals), 3.0 * scatter)
+        )
         design = np.column_stack([arm / distance[:, None], np.ones(len(points))])
         normal = design.T @ (weights[:, None] * design) / scatter**2
         pull = design.T @ (weights * residuals) / scatter**2
@@ -56,7 +60,7 @@ def fit_circle(points: Array, start: Array, level: tuple[float, float] | None = 
         values += step
         if turn > 4 and np.abs(step).max() < 1e-6 * max(values[2], 1.0):
             break
-    spread = np.linalg.pinv(normal) * _inflation(residuals, weights, scatter, 3)
+    spread = np.linalg.pinv(normal) * _inflation(residuals, weights, scatter, 3, least)
     return Fit(values, spread, residuals, weights, scatter)
 
 
@@ -91,7 +95,7 @@ def _biweight(residuals: Array, scatter: float) -> Array:
     return np.where(np.abs(ratio) < 1.0, (1.0 - ratio**2) ** 2, 0.0)
 
 
-def _inflation(residuals: Array, weights: Array, scatter: float, parameters: int) -> float:
+def _inflation(residuals: Array, weights: Array, scatter: float, parameters: int, least: float = 0.0) -> float:
     """Return by how much the variance of the parameters exceeds that of independent residuals of the robust scatter.
 
     Two causes: parameters that were taken from the residuals, with the scatter's own estimate by weighted squares; and
@@ -105,7 +109,7 @@ def _inflation(residuals: Array, weights: Array, scatter: float, parameters: int
     square = (
         float(np.sum(weights[used] * kept**2) / np.sum(weights[used])) / 0.83
     )  # of normal errors under the biweight
-    variance = max(square, 0.5 * scatter**2) * count / (count - parameters) / scatter**2
+    variance = max(max(square, 0.5 * scatter**2) * count / (count - parameters), least**2) / scatter**2
     centred = kept - kept.mean()
     power = float(centred @ centred)
     together = 1.0
