@@ -320,6 +320,26 @@ def test_an_array_of_something_else_is_refused(tmp_path):
 
 
 @pytest.mark.xfail(strict=True, reason="a flag in the archive asks for what zipfile does not know")
+@pytest.mark.parametrize("flag", [0x01, 0x20, 0x40])  # encrypted, patched, strongly encrypted: .ZIP file format, 4.4.4
+def test_a_damaged_flag_is_refused(interrupted, tmp_path, flag):
+    damaged = bytearray(interrupted.read_bytes())
+    damaged[damaged.rfind(b"PK\x01\x02") + 8] ^= flag  # of the last entry in the archive's directory
+    path = tmp_path / "damaged.npz"
+    path.write_bytes(bytes(damaged))
+    with warnings.catch_warnings():
+        warnings.simplefilter("ignore", ResourceWarning)  # a file left open: the matter of the tests above
+        try:
+            Checkpoint(path, "the same", resume=True).load()
+        except Refusal as refusal:
+            said = str(refusal)
+        except (NotImplementedError, RuntimeError) as error:
+            said = repr(error)
+        gc.collect()
+    assert "no interrupted fit" in said
+
+
+# Not strict: which bytes are hit depends on the library's way of writing.
+@pytest.mark.xfail(strict=False, reason="a flag in the archive asks for what zipfile does not know")
 def test_a_damaged_byte_is_refused_or_does_no_harm(interrupted, tmp_path):
     whole = interrupted.read_bytes()
     right = Checkpoint(interrupted, "the same", resume=True).load()
