@@ -203,7 +203,7 @@ def test_sensitivity_standoff_and_trigger_enter_as_they_should():
 
 
 def test_a_hint_decides_where_the_trace_alone_cannot():
-    bench = Bench(lifetime=10e-6, collapse=0.22, collapse_duration=25e-9, echo=-0.4, form="exponential")
+    bench = Bench(lifetime=10e-6, collapse=0.3, collapse_duration=25e-9, echo=-0.4, form="exponential")
     time, voltage, truth = record(bench, np.random.default_rng(9))
     assert "bubble-lifetime" not in found(measure_trace(time, voltage, bench.setup))
     kinds = found(measure_trace(time, voltage, replace(bench.setup, lifetime_hint=11e-6)))

@@ -37,6 +37,7 @@ Indices = NDArray[np.intp]
 
 _ABOVE = 5.0  # standard deviations of the filtered noise: among some hundred samples chance gives none in 10 000 traces
 _ABOVE_LATER = 6.0  # the same over a whole record
+_BESIDE = 0.03  # share of the largest below which nothing is a pulse: what the slow background leaves beside a long one
 _WINDOW = 0.15  # share of the travel time by which the arrival may differ: standoff, temperature, the shock's advance
 _WINDOW_EDGE = 0.12e-6  # [s] beside that share
 _EARLIEST_COLLAPSE = 2e-6  # [s] after the first pulse; a bubble of 10 µm in water lives as long
@@ -170,9 +171,10 @@ def _first_pulse(record: _Record) -> _First:
     if loud is not None and loud[1] >= begin:
         begin = min(loud[1] + 1, int(np.searchsorted(time, due - 0.3 * _WINDOW * setup.travel - 0.3 * _WINDOW_EDGE)))
     end = min(int(np.searchsorted(time, late)), time.size - 1)
-    above = np.flatnonzero(np.abs(record.filtered[begin:end]) > _ABOVE * record.level)
+    size = np.abs(record.filtered[begin:end])
+    above = np.flatnonzero(size > max(_ABOVE * record.level, _BESIDE * float(np.max(size, initial=0.0))))
     if above.size == 0:
-        largest = float(np.max(np.abs(record.filtered[begin:end]), initial=0.0)) / record.level
+        largest = float(np.max(size, initial=0.0)) / record.level
         raise Unmeasurable(
             f"no pulse above the noise in the expected window, {shown(float(time[begin]), None, 's')} to"
             f" {shown(float(time[end]), None, 's')} (largest {largest:.1f} standard deviations,"
@@ -281,7 +283,7 @@ def _later(record: _Record, first: _First) -> list[Event]:
     setup, time = record.setup, record.time
     begin = int(np.searchsorted(time, first.front.time + max(_EARLIEST_COLLAPSE, 20 * setup.response_time)))
     apart = math.ceil(max(0.15e-6, 10 * setup.response_time) / record.step)
-    level = _ABOVE_LATER * record.level
+    level = max(_ABOVE_LATER * record.level, _BESIDE * float(np.max(np.abs(record.filtered[begin:]), initial=0.0)))
     if record.noise.step > record.noise.sd:
         level = max(level, 1.5 * record.noise.step)
     lobe = first.pulse.lobe
