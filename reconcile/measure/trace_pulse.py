@@ -8,7 +8,7 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.optimize import least_squares
+from scipy.optimize import leastsq
 from scipy.special import erfcx, ndtr
 
 from reconcile.measure.measured import Array
@@ -209,15 +209,15 @@ def _fitted(
         off[top] = np.minimum(off[top], 0.0)
         return np.concatenate((off, [(x[2] - math.log(4.0)) / 1.5, x[3], 0.2 * (x[0] - 0.7)]))
 
-    fit = least_squares(residuals, np.array([0.7, -0.3, math.log(4.0), 0.0]), method="lm", max_nfev=400)
-    if not np.isfinite(fit.x).all() or not np.isfinite(fit.fun).all():
+    start = np.array([0.7, -0.3, math.log(4.0), 0.0])
+    x, covariance, info, *_ = leastsq(residuals, start, full_output=True, maxfev=400)
+    rest = np.asarray(info["fvec"], dtype=np.float64)
+    if covariance is None or not np.isfinite(x).all() or not np.isfinite(rest).all():
         return None
-    height, at, decay, blur = parts(fit.x)
-    slopes = np.asarray(fit.jac, dtype=np.float64)
-    covariance = np.linalg.pinv(slopes.T @ slopes)
-    worse = max(1.0, float(np.sum(fit.fun[: t.size] ** 2)) / max(t.size - 4, 1))
+    height, at, decay, blur = parts(x)
+    worse = max(1.0, float(np.sum(rest[: t.size] ** 2)) / max(t.size - 4, 1))
     u = response * math.sqrt(max(float(covariance[1, 1]), 0.0) * worse)
-    return Front(at, u, height, decay, blur, response, form), float(fit.cost)
+    return Front(at, u, height, decay, blur, response, form), 0.5 * float(rest @ rest)
 
 
 def integrate(pulse: Pulse, front: Front, baseline_u: float) -> tuple[float, float, tuple[int, int]]:
