@@ -1,5 +1,6 @@
 """Tables of images, traces and maps: which files they name, and what becomes of what was measured on them."""
 
+import csv
 import unicodedata
 from types import SimpleNamespace
 
@@ -14,6 +15,7 @@ from reconcile.campaign.files import sha256_of
 from reconcile.campaign.manifest import load
 from reconcile.campaign.patterns import matching, ways
 from reconcile.campaign.refusal import Refusal
+from reconcile.cli import main
 from reconcile.gather import gather
 from reconcile.measure.measured import Finding, Measured, Outline, Unmeasurable
 from reconcile.measure.particles import from_diameters
@@ -394,3 +396,36 @@ def test_a_micrograph_named_by_its_shot_belongs_to_the_shots_sample(tmp_path, mo
     picture(tmp_path / "tem" / "s003.png")
     found = read(write(tmp_path, SAMPLES, more=MICROGRAPHS.replace("{sample}_{frame}", "{shot}"), log=SAMPLE_LOG))
     assert {one.sample for one in found.readings if one.kind == "median-diameter"} == {"B"}
+
+
+# ---- the command ----
+
+
+def test_measure_writes_readings_refusals_and_a_drawing_of_each_file(tmp_path, camera, capsys, monkeypatch):
+    temporary = tmp_path / "temporary"
+    temporary.mkdir()
+    monkeypatch.setattr("tempfile.tempdir", str(temporary))
+    folder, out = tmp_path / "campaign", tmp_path / "out"
+    picture(folder / "frames" / "s001_1ns.png", grey=20)
+    picture(folder / "frames" / "s002_1ns.png", grey=255)
+    picture(folder / "frames" / "other.png")
+    more = FRAMES.format("{shot}_{delay}ns.png")
+    assert main(["measure", str(write(folder, more=more)), "--out", str(out), "--quiet"]) == 0
+    said = capsys.readouterr().out
+    for part in (
+        "bubble radius: 1 reading",
+        "1 drawing of what was found, in overlays/",
+        "refused frames/s002_1ns.png: found nothing but light",
+        "note frames/s001_1ns.png: as round as it can be",
+        "no table asks for frames/other.png",
+    ):
+        assert part in said
+    with (out / "readings.csv").open(encoding="utf-8-sig", newline="") as stream:
+        rows = [row for row in csv.DictReader(stream) if row["kind"] == "bubble-radius"]
+    assert [(row["shot"], row["source"], float(row["delay"])) for row in rows] == [
+        ("s001", "frames/s001_1ns.png", approx(1e-9, abs=0))
+    ]
+    assert "frames/s002_1ns.png" in (out / "refused.csv").read_text(encoding="utf-8-sig")
+    assert [path.name for path in (out / "overlays").iterdir()] == ["frames_s001_1ns.png.png"]
+    assert list(temporary.iterdir()) == []
+    assert main(["verify", str(out)]) == 0

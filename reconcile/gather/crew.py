@@ -17,6 +17,7 @@ Job = TypeVar("Job")
 Result = TypeVar("Result")
 
 LARGEST_CHUNK = 16  # files handed over at once: the hand-over then costs far less than the work
+MOST_WORKERS = 60  # Windows waits for no more than 63 processes at once
 FEW = 24  # files that are done here sooner than processes start up
 _THREADS = ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS", "VECLIB_MAXIMUM_THREADS")
 
@@ -32,7 +33,7 @@ class Crew(Generic[Job, Result]):
     """
 
     def __init__(self, workers: int, work: Callable[[Job], Result], lost: Callable[[Job], Result]) -> None:
-        self.workers, self.work, self.lost = workers, work, lost
+        self.workers, self.work, self.lost = min(workers, MOST_WORKERS), work, lost
         self._pool: ProcessPoolExecutor | None = None
 
     def __enter__(self) -> Crew[Job, Result]:

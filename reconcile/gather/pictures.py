@@ -21,6 +21,8 @@ from reconcile.gather.values import Known
 from reconcile.measure.measured import Measured
 from reconcile.measure.particles import from_diameters
 
+FILES_FOR_A_WORKER = 8  # with fewer, a process starts up for longer than it works
+
 
 @dataclass(slots=True)
 class Pictures:
@@ -51,7 +53,8 @@ class Pictures:
         tables = {number: self.campaign.tables[number] for number in sources}
         settings = {number: settings_of(self.campaign, table, self.collected) for number, table in tables.items()}
         found: dict[int, list[Reading]] = {}
-        with Crew(workers, measure_file, lost_file) as crew:
+        worth_starting = 1 + max((len(group) for group in sources.values()), default=0) // FILES_FOR_A_WORKER
+        with Crew(min(workers, worth_starting), measure_file, lost_file) as crew:
             for number, table in tables.items():
                 jobs = self._jobs(number, settings[number], sources[number])
                 results = crew.run(jobs, _Teller(progress, table, len(jobs)))

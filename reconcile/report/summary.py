@@ -94,6 +94,8 @@ def gathered_lines(gathered: Gathered, folder: Path) -> list[str]:
         if counted[kind]:
             limit = f", {below[kind]} below the limit" if below[kind] else ""
             text.append(f"  {KINDS[kind].words}: {lines.count(counted[kind], 'reading')}{limit}")
+    if gathered.overlays:
+        text.append(f"  {lines.count(len(gathered.overlays), 'drawing')} of what was found, in overlays/")
     text += [f"  refused {lines.plain(entry.source)}: {lines.plain(entry.reason)}" for entry in gathered.refused]
     text += [f"  note {lines.plain(entry.source)}: {lines.plain(entry.note)}" for entry in gathered.notes]
     if gathered.unasked:
