@@ -186,7 +186,6 @@ def test_two_strays_among_six_are_both_found():
     assert all(0.0 <= p <= 1.0 for p in stray)
 
 
-@pytest.mark.xfail(strict=True, reason="beyond four repeats the choice is one stray or all: 25 nat are lost here")
 def test_two_strays_among_six_do_not_take_the_others_with_them():
     here, rate = cell(TWO_STRAY, 0.03, 1.0, 0.05, 1.2), np.array([0.05])
     brute = by_quadrature(TWO_STRAY, 0.03, 1.0, 0.05, 1.2, 0.05)

@@ -4,8 +4,10 @@ from __future__ import annotations
 
 import hashlib
 import os
+import struct
 import tempfile
 import zipfile
+import zlib
 from collections.abc import Iterator
 from dataclasses import dataclass, replace
 from pathlib import Path
@@ -20,6 +22,21 @@ from reconcile.inference.lattice import Index
 from reconcile.inference.model import Array
 from reconcile.inference.proposal import Mixture, Proposal, Warp
 from reconcile.inference.sampling import Ensemble
+
+# What numpy and zipfile raise on files that are damaged, or are no archive of arrays at all.
+_DAMAGED = (
+    ValueError,
+    KeyError,
+    EOFError,
+    TypeError,
+    AttributeError,
+    NotImplementedError,
+    RuntimeError,
+    MemoryError,
+    zipfile.BadZipFile,
+    zlib.error,
+    struct.error,
+)
 
 _ENSEMBLE_ARRAYS = ("position", "chain", "log_prob")
 _WARP_ARRAYS = ("location", "scale", "skew", "tail")
@@ -68,10 +85,10 @@ class Checkpoint:
         if self.path is None or not self.resume or not self.path.exists():
             return None
         try:
-            with np.load(self.path, allow_pickle=False) as arrays:
+            with self.path.open("rb") as file, np.load(file, allow_pickle=False) as arrays:
                 if str(arrays["mark"]) == self.mark:
                     return _unpacked(dict(arrays))
-        except (ValueError, KeyError, zipfile.BadZipFile, EOFError):
+        except _DAMAGED:
             self._refuse("a file that is no interrupted fit")
         self._refuse("an interrupted fit of other files, another seed, other options or another version")
         return None

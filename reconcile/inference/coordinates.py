@@ -42,8 +42,8 @@ class Axis:
     def of(cls, believed: Believed) -> Axis:
         """Choose the scale of an input by its prior and range."""
         density = believed.density
-        if believed.entry.name == "absorbed_fraction" and not density.bounded:
-            return cls(density, "log")
+        if believed.entry.name == "absorbed_fraction" and density.prior.family not in ("uniform", "loguniform"):
+            return cls(density, "log")  # as the level of the absorbed fluence; what is cut at 1 is cut there
         if density.bounded or believed.entry.scale == "logit":
             return cls(density, "interval")
         return cls(density, believed.entry.scale)

@@ -57,11 +57,16 @@ class Density:
     def log_pdf(self, x: Array) -> Array:
         """Natural logarithm of the density [1/unit]; −inf outside the support."""
         low, high = self.support
-        inside = (x >= low) & (x <= high)
+        inside = (x >= low) & (x <= high) & ~self._at_open_end(x)
         safe = np.where(inside, x, self.quantile(np.array(0.5)))
         with np.errstate(divide="ignore"):
             value = self._log_pdf_uncut(safe) - math.log(self._cdf_high() - self._cdf_low())
         return np.where(inside, value, -np.inf)
+
+    def _at_open_end(self, x: Array) -> NDArray[np.bool_]:
+        """Where a family's own density falls to nothing at the very end of its range."""
+        family = self.prior.family
+        return ((family in ("lognormal", "logitnormal")) & (x == 0.0)) | ((family == "logitnormal") & (x == 1.0))
 
     def cdf(self, x: Array) -> Array:
         """Probability of lying below `x`."""

@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import itertools
 import math
+from collections.abc import Iterator
 from dataclasses import dataclass
 
 import numpy as np
@@ -15,7 +16,7 @@ from scipy import special
 
 from reconcile.inference.model import Array
 
-MOST_REPEATS = 4  # up to which every pattern of stray repeats is weighed; beyond it none, one or all
+MOST_PATTERNS = 300  # of stray repeats in a cell that are weighed: every one of up to eight repeats
 LIMIT_SPREAD = 1.0 / 3.0  # uncertainty near a detection limit over that limit, taken as three of them: common practice
 _ROOT_2_OVER_PI = math.sqrt(2.0 / math.pi)
 
@@ -41,7 +42,10 @@ def density(cell: Cell, rate: Array, *, censored: bool) -> Array:
         return (1.0 - rate) * sound[0] + rate * stray[0]
     if len(cell.value) == 1:
         return _single(cell, rate)
-    return np.sum([term for _, term in _patterns(cell, rate)], axis=0)
+    total = np.zeros(1)
+    for _, term in _patterns(cell, rate):
+        total = total + term
+    return total
 
 
 def _single(cell: Cell, rate: Array) -> Array:
@@ -75,37 +79,42 @@ def stray_probability(cell: Cell, rate: Array, *, censored: bool) -> Array:
         sound, stray = _below(cell)
         return rate * stray / ((1.0 - rate) * sound + rate * stray)
     total, by_repeat = np.zeros(1), [np.zeros(1) for _ in cell.value]
-    for pattern, term in _patterns(cell, rate):
+    for strays, term in _patterns(cell, rate):
         total = total + term
-        by_repeat = [so_far if is_sound else so_far + term for so_far, is_sound in zip(by_repeat, pattern, strict=True)]
+        for number in strays:
+            by_repeat[number] = by_repeat[number] + term
     return np.stack([part / total for part in by_repeat])
 
 
-def _patterns(cell: Cell, rate: Array) -> list[tuple[tuple[bool, ...], Array]]:
-    """Each pattern of sound (True) and stray (False) repeats, with its weighted density (m, draws)."""
+def _stray_sets(repeats: int) -> Iterator[tuple[int, ...]]:
+    """Sets of repeats that may be stray: every set of few repeats; of many, sets of few strays, and all of them."""
+    taken = 0
+    for strays in range(repeats):
+        taken += math.comb(repeats, strays)
+        if strays > 1 and taken > MOST_PATTERNS:
+            break
+        yield from itertools.combinations(range(repeats), strays)
+    yield tuple(range(repeats))
+
+
+def _patterns(cell: Cell, rate: Array) -> Iterator[tuple[tuple[int, ...], Array]]:
+    """Each set of stray repeats, with the weighted density (m, draws) of the cells under it."""
     repeats = len(cell.value)
-    if repeats <= MOST_REPEATS:
-        patterns = list(itertools.product((True, False), repeat=repeats))
-    else:
-        one_stray = [tuple(other != number for other in range(repeats)) for number in range(repeats)]
-        patterns = [(True,) * repeats, *one_stray, (False,) * repeats]
     deviation = cell.value - cell.expected
     relative = (deviation / cell.u) ** 2
     pull, hold = cell.shared * deviation / cell.u**2, (cell.shared / cell.u) ** 2
     stray = _stray(deviation, cell.u, cell.width)
-    terms = []
-    for pattern in patterns:
-        sound = np.flatnonzero(pattern)
-        weight = (1.0 - rate) ** len(sound) * rate ** (repeats - len(sound))
-        for number in np.flatnonzero(~np.array(pattern)):
+    for strays in _stray_sets(repeats):
+        sound = [number for number in range(repeats) if number not in strays]
+        weight = (1.0 - rate) ** len(sound) * rate ** len(strays)
+        for number in strays:
             weight = weight * stray[number]
-        if len(sound):
+        if sound:
             # Normal readings with one shared normal offset, integrated in closed form (Sherman and Morrison 1950).
             inflation = 1.0 + hold[sound].sum(axis=0)
             exponent = relative[sound].sum(axis=0) - pull[sound].sum(axis=0) ** 2 / inflation
             weight = weight * np.exp(-0.5 * exponent) / np.sqrt(inflation)
-        terms.append((pattern, weight))
-    return terms
+        yield strays, weight
 
 
 def _stray(deviation: Array, u: Array, width: Array) -> Array:

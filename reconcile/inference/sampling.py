@@ -19,7 +19,7 @@ from reconcile.inference.proposal import Mixture
 from reconcile.inference.workers import spread_over
 
 ENSEMBLES = 4
-_BURN_IN = 10  # steps dropped: the walkers begin at weighted points of the adapted pool
+_BURN_IN = 20  # steps dropped: the walkers begin at weighted points of the adapted pool
 _STEPS = 20  # in a round
 MOST_ROUNDS = 40
 GOOD_RHAT = 1.01  # rank-normalised split R-hat: Vehtari et al., Bayesian Analysis 16 (2021) 667
