@@ -10,10 +10,11 @@ from __future__ import annotations
 from dataclasses import dataclass, replace
 
 import numpy as np
+from numpy.typing import NDArray
 from scipy import ndimage
 
 from reconcile.measure.crater_edge import BIN, Edge, find_edge, ring_means
-from reconcile.measure.levelling import MAD, Array, Levelled, Mask, level, smoothed
+from reconcile.measure.levelling import LEAST_SURROUND, MAD, Array, Levelled, Mask, level, smoothed
 from reconcile.measure.measured import Finding, Measured, Outline, Stroke, Unmeasurable
 
 LIMIT = 3.0  # noise
@@ -24,7 +25,6 @@ ANGLES = 96
 HARMONICS = 4  # of the outline's distance from its centre
 BOTTOM = 0.45  # of the radius: a quarter of the area, and in a paraboloid the deepest fifth
 SURROUND_FROM = 2.5  # radii: at the latest; the rim lies within
-LEAST_SURROUND = 0.15  # share of the map
 FEWEST_RADIUS = 3.0  # points
 
 
@@ -41,7 +41,9 @@ class _Shape:
         """Return the distance from the centre [px] in the directions `angle` [rad]."""
         orders = np.arange(self.cosines.size).reshape(-1, *[1] * angle.ndim)
         shaped = (-1, *[1] * angle.ndim)
-        waves = self.cosines.reshape(shaped) * np.cos(orders * angle) + self.sines.reshape(shaped) * np.sin(orders * angle)
+        waves = self.cosines.reshape(shaped) * np.cos(orders * angle) + self.sines.reshape(shaped) * np.sin(
+            orders * angle
+        )
         return np.asarray(waves.sum(axis=0))
 
     @property
@@ -115,9 +117,7 @@ def measure_map(height: Array, pixel_pitch: float) -> Finding:
 
 def _check(height: Array) -> None:
     if height.ndim != 2 or min(height.shape) < 16:
-        raise Unmeasurable(
-            f"an array of shape {height.shape}", "a map of at least 16 by 16 points", "Check the file."
-        )
+        raise Unmeasurable(f"an array of shape {height.shape}", "a map of at least 16 by 16 points", "Check the file.")
     known = height[np.isfinite(height)]
     if known.size < 0.3 * height.size:
         raise Unmeasurable(
@@ -221,9 +221,7 @@ def _harmonics(smooth: Array, at: float, centre: tuple[float, float], start: flo
         solution = np.linalg.lstsq(design[used], radius[used], rcond=None)[0]
         away = np.abs(radius - design @ solution)
         used = np.isfinite(radius) & (away <= max(3.5 * MAD * float(np.nanmedian(away)), 0.3))
-    return _Shape(
-        *centre, solution[: HARMONICS + 1], np.concatenate([np.zeros(1), solution[HARMONICS + 1 :]])
-    )
+    return _Shape(*centre, solution[: HARMONICS + 1], np.concatenate([np.zeros(1), solution[HARMONICS + 1 :]]))
 
 
 def _excluded(surface: Levelled, distance: Array, edge: float, radius: float) -> tuple[Mask, float]:
@@ -254,7 +252,7 @@ def _edge(surface: Levelled, shape: _Shape, distance: Array) -> Edge:
 
 def _finding(surface: Levelled, crater: _Crater, pixel_pitch: float) -> Finding:
     shape, distance, edge = crater.shape, crater.distance, crater.edge
-    inside = (distance < edge.at) & np.isfinite(surface.height)
+    known = np.isfinite(surface.height)
     level_u = float(np.hypot(surface.level_u(distance < edge.at), crater.rim_left))
     depth, bottom_u = _bottom(surface, shape, distance, edge.at)
     # A point may be a sample or a mean over the pitch, which of a paraboloid is d/(6 R²) less deep: half of it is taken.
@@ -269,10 +267,12 @@ def _finding(surface: Levelled, crater: _Crater, pixel_pitch: float) -> Finding:
     radius_u = float(np.hypot(edge.u * shape.area_radius, level_u / edge.slope))
     diameter, diameter_u = 2 * radius * pixel_pitch, 2 * radius_u * pixel_pitch
     area = np.pi * radius**2
-    mean = -float(np.mean(surface.height[inside]))
-    volume = mean * area * pixel_pitch**2
-    point_u = surface.noise * np.sqrt(surface.together / max(np.count_nonzero(inside), 1))
-    volume_u = area * pixel_pitch**2 * float(np.hypot(level_u, point_u))
+    # Points on the edge count by the share of them that lies inside; what they mix of both sides is in the uncertainty.
+    share = np.clip(0.5 + (edge.at - distance[known]) * shape.area_radius, 0, 1)
+    volume = -float(np.average(surface.height[known], weights=share)) * area * pixel_pitch**2
+    point_u = surface.noise * np.sqrt(surface.together / float(share.sum()))
+    mixed_u = 2 * np.pi * radius * edge.slope / 6
+    volume_u = pixel_pitch**2 * float(np.hypot(area * np.hypot(level_u, point_u), mixed_u))
     measured = (
         Measured("crater-depth", depth, depth_u),
         Measured("crater-diameter", diameter, diameter_u),
@@ -284,7 +284,9 @@ def _finding(surface: Levelled, crater: _Crater, pixel_pitch: float) -> Finding:
         Stroke(shape.line(BOTTOM * edge.at), "reference"),
         Stroke(np.argwhere(~np.isfinite(surface.height))[:500, ::-1].astype(float), "left-out", marks=True),
     )
-    return Finding(measured, Outline(tuple(one for one in strokes if len(one.points)), caption), _remarks(surface, shape))
+    return Finding(
+        measured, Outline(tuple(one for one in strokes if len(one.points)), caption), _remarks(surface, shape)
+    )
 
 
 def _bottom(surface: Levelled, shape: _Shape, distance: Array, edge: float) -> tuple[float, float]:
@@ -300,17 +302,17 @@ def _bottom(surface: Levelled, shape: _Shape, distance: Array, edge: float) -> t
             "at least 12",
             "Map the site with a finer pitch, or measure it again where points are missing.",
         )
-    rows, columns = np.nonzero(inside)
+    rows, columns = np.nonzero(distance < BOTTOM * edge)  # the deepest place may lie where points are missing
     reach = BOTTOM * edge * shape.area_radius
     y, x = (rows - shape.row) / reach, (columns - shape.column) / reach
-    values = surface.height[inside]
-    full = _bottom_terms(x, y)
+    everywhere, known = _bottom_terms(x, y), np.isfinite(surface.height[rows, columns])
+    values, full = surface.height[rows, columns][known], everywhere[known]
     fits = [_fitted(design, values) for design in (full[:, :-1], full)]
-    (_, _, _, plain_sd), (design, solution, covariance, sd) = fits
+    (_, _, _, plain_sd), (_, solution, covariance, sd) = fits
     n = values.size / surface.together
     if not (sd < plain_sd and n * np.log((plain_sd / max(sd, 1e-300)) ** 2) > np.log(n) + 9):
-        design, solution, covariance, sd = fits[0]
-    deepest = int(np.argmin(design @ solution))
+        _, solution, covariance, _ = fits[0]
+    deepest = int(np.argmin(everywhere[:, : solution.size] @ solution))
     # The deepest place lies between points: a finer raster around the deepest of them.
     step = np.arange(-20, 21) / 20 / reach
     fine_y, fine_x = (grid.ravel() for grid in np.meshgrid(y[deepest] + step, x[deepest] + step, indexing="ij"))
@@ -319,7 +321,7 @@ def _bottom(surface: Levelled, shape: _Shape, distance: Array, edge: float) -> t
     return -float(lowest @ solution), float(np.sqrt(lowest @ covariance @ lowest * surface.together))
 
 
-def _bottom_terms(x: Array, y: Array) -> Array:
+def _bottom_terms(x: NDArray[np.floating], y: NDArray[np.floating]) -> Array:
     """Return the terms of a paraboloid and of its fourth power: (n, 7)."""
     square = x * x + y * y
     return np.stack([np.ones_like(x), x, y, x * x, x * y, y * y, square * square], axis=1)
@@ -327,17 +329,19 @@ def _bottom_terms(x: Array, y: Array) -> Array:
 
 def _fitted(design: Array, values: Array) -> tuple[Array, Array, Array, float]:
     """Fit by least squares with biweights: design, solution, its covariance, standard deviation of a point."""
-    weight = np.ones(values.size)
-    solution, sd = np.zeros(design.shape[1]), 0.0
+    weight: Array = np.ones(values.size)
+    solution: Array = np.zeros(design.shape[1])
+    residual = values
     for _ in range(5):
-        solution = np.linalg.lstsq(design * np.sqrt(weight)[:, None], values * np.sqrt(weight), rcond=None)[0]
+        root = np.sqrt(weight)
+        solution = np.asarray(np.linalg.lstsq(design * root[:, None], values * root, rcond=None)[0], dtype=float)
         residual = values - design @ solution
         sd = MAD * float(np.median(np.abs(residual)))
         if sd == 0:
             break
         weight = np.clip(1 - (residual / (6 * sd)) ** 2, 0, None) ** 2
     spread = float(np.sqrt(np.sum(weight * residual**2) / max(np.sum(weight) - design.shape[1], 1)))
-    normal = np.linalg.pinv((design * weight[:, None]).T @ design)
+    normal = np.asarray(np.linalg.pinv((design * weight[:, None]).T @ design), dtype=float)
     return design, solution, normal * spread**2, spread
 
 

@@ -122,9 +122,10 @@ def ring_means(distance: Array, height: Array, ends: tuple[float, float], noise:
     values, places = height[used], distance[used]
     size = int((ends[1] - ends[0]) / BIN) + 1
     kept = np.ones(values.size, dtype=bool)
-    mean = place = spread = count = np.zeros(size)
+    mean: Array = np.zeros(size)
+    place, spread, count = mean, mean, mean
     for _ in range(2):  # the second time without what lies far from its ring
-        count = np.bincount(index[kept], minlength=size)
+        count = np.bincount(index[kept], minlength=size).astype(float)
         some = np.maximum(count, 1)
         mean = np.bincount(index[kept], values[kept], minlength=size) / some
         place = np.bincount(index[kept], places[kept], minlength=size) / some

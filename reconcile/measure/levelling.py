@@ -19,6 +19,7 @@ MAD = 1.4826  # median absolute deviation of a normal distribution → standard 
 SPIKE = 8.0  # noise, beyond what the points around differ by
 OUTLYING = 4.0  # smoothed noise: a crater, its rim or dirt
 STRIPED = 3.0  # variance of the rows' levels over what noise alone gives: then they are stripes
+LEAST_SURROUND = 0.15  # share of the map
 _PASSES = 6
 _LAGS = 4  # points within which the correlation of the noise is summed
 _FEWEST = 60  # points of the surround
@@ -46,7 +47,7 @@ class Levelled:
         """
         terms = _terms(self.height.shape, self.order)[:, inside].mean(axis=1)
         form = float(terms @ self.covariance @ terms)
-        lines = self.line_u**2 / max(np.count_nonzero(inside.any(axis=1)), 1)
+        lines = self.line_u**2 / max(int(np.count_nonzero(inside.any(axis=1))), 1)
         side = max(int(np.sqrt(np.count_nonzero(inside)) / 2), 4)
         return float(np.sqrt(form + lines + self._unevenness(side) ** 2))
 
@@ -101,9 +102,10 @@ def level(height: Array, excluded: Mask | None = None) -> Levelled | None:
         lines = _Lines.of(formless, surround)
         residual = formless - lines.offsets()
         noise = _deviation(residual[surround])
-        if excluded is None:
-            surround = known & ~standing_out(residual, surround)
-        surround &= np.abs(residual) <= max(5 * noise, 1e-12 * float(np.nanmax(np.abs(residual))) + 1e-300)
+        within = np.abs(residual) <= max(5 * noise, 1e-12 * float(np.nanmax(np.abs(residual))) + 1e-300)
+        flat = (known & ~standing_out(residual, surround) if excluded is None else surround) & within
+        # A surround that keeps shrinking has lost its form, not found a larger crater.
+        surround = flat if np.count_nonzero(flat) > LEAST_SURROUND * flat.size else surround & within
     residual = residual - float(np.mean(residual[surround]))
     return Levelled(
         residual,
@@ -119,7 +121,8 @@ def level(height: Array, excluded: Mask | None = None) -> Levelled | None:
 
 def without_spikes(height: Array) -> Array:
     """Return the map with single points far from all around them set to NaN."""
-    filled = np.where(np.isfinite(height), height, np.nanmedian(height))
+    nearest = ndimage.distance_transform_edt(~np.isfinite(height), return_distances=False, return_indices=True)
+    filled = height[tuple(nearest)]
     around = ndimage.median_filter(filled, size=5, mode="nearest")
     away = np.abs(filled - around)
     usual = ndimage.median_filter(away, size=5, mode="nearest")  # large on slopes, where neighbours differ
@@ -128,24 +131,26 @@ def without_spikes(height: Array) -> Array:
 
 
 def standing_out(residual: Array, surround: Mask) -> Mask:
-    """Return what rises or sinks out of the surround, widened by a quarter of its own radius."""
+    """Return the largest thing that rises or sinks out of the surround, what stands out close to it, and a margin.
+
+    All else that stands out is left to robust weights: left out as well, the bends of a form not yet fitted would go too.
+    """
     smooth = smoothed(residual, 1.5)
     usual = smooth[surround & np.isfinite(smooth)]
-    centre = float(np.median(usual))
-    out = np.abs(smooth - centre) > OUTLYING * MAD * float(np.median(np.abs(usual - centre)))
-    labels, number = ndimage.label(out & np.isfinite(residual))
+    away = np.abs(np.where(np.isfinite(smooth), smooth, np.median(usual)) - np.median(usual))
+    labels, number = ndimage.label(away > OUTLYING * MAD * float(np.median(np.abs(usual - np.median(usual)))))
     if not number:
         return np.zeros(residual.shape, dtype=bool)
-    areas = np.bincount(labels.ravel())
-    kept = areas >= 9
-    kept[0] = False
-    mask = kept[labels]
-    largest = int(np.argmax(np.where(kept, areas, 0)))
-    if not mask.any():
-        return mask
-    reach = ndimage.distance_transform_edt(~mask)
-    wide = ndimage.distance_transform_edt(labels != largest)
-    return (reach <= 2) | (wide <= max(0.25 * np.sqrt(areas[largest] / np.pi), 3.0))
+    volumes = np.bincount(labels.ravel(), away.ravel())
+    volumes[0] = 0
+    main = labels == int(np.argmax(volumes))
+    if np.count_nonzero(main) < 9:
+        return np.zeros(residual.shape, dtype=bool)
+    radius = float(np.sqrt(np.count_nonzero(main) / np.pi))
+    reach = np.asarray(ndimage.distance_transform_edt(~main))
+    close = np.unique(labels[reach <= 0.6 * radius])
+    mask = np.isin(labels, close[close > 0]) & (reach <= 2 * radius)
+    return np.asarray((reach <= max(0.25 * radius, 3.0)) | ndimage.binary_dilation(mask, iterations=2))
 
 
 def smoothed(values: Array, width: float) -> Array:
@@ -203,7 +208,7 @@ def _form(target: Array, surround: Mask, together: float) -> tuple[int, Array, A
     for order in (1, 2):
         design = _terms(target.shape, order)[:, surround].T
         parameters, weight, sd = _robust(design, values)
-        normal = np.linalg.inv((design * weight[:, None]).T @ design)
+        normal = np.asarray(np.linalg.inv((design * weight[:, None]).T @ design), dtype=float)
         fits.append((order, parameters, normal * sd**2 * together, sd))
     (_, _, _, flat), (_, _, _, curved) = fits
     # Bayesian information criterion: three more parameters, each worth ln n (Schwarz 1978, Ann. Stat. 6, 461, from memory).
@@ -214,9 +219,11 @@ def _form(target: Array, surround: Mask, together: float) -> tuple[int, Array, A
 def _robust(design: Array, values: Array) -> tuple[Array, Array, float]:
     """Fit by least squares with biweights: parameters, weights, standard deviation."""
     weight = np.ones(values.size)
-    parameters, sd = np.zeros(design.shape[1]), 0.0
+    parameters: Array = np.zeros(design.shape[1])
+    sd = 0.0
     for _ in range(4):
-        parameters = np.linalg.solve((design * weight[:, None]).T @ design, design.T @ (weight * values))
+        normal = (design * weight[:, None]).T @ design
+        parameters = np.asarray(np.linalg.solve(normal, design.T @ (weight * values)), dtype=float)
         residual = values - design @ parameters
         sd = MAD * float(np.median(np.abs(residual)))
         if sd == 0:
@@ -263,17 +270,20 @@ class _Lines:
 
 
 def _offsets(values: Array) -> tuple[Array | None, float]:
-    """Return the level of each row (NaN where too little of it is left) and its standard uncertainty; None without stripes."""
+    """Return the level of each row, that of its neighbours where too little of it is left, and its uncertainty; None without stripes."""
     count = np.isfinite(values).sum(axis=1)
     enough = count >= _FEWEST_IN_ROW
     if np.count_nonzero(enough) < 8:
         return None, 0.0
-    levels = np.full(values.shape[0], np.nan)
+    levels = np.zeros(values.shape[0])
     levels[enough] = np.nanmedian(values[enough], axis=1)
+    levels = np.interp(np.arange(levels.size), np.flatnonzero(enough), levels[enough])
     within = values - levels[:, None]
     spread = MAD * float(np.nanmedian(np.abs(within)))
     pair = within[:, 1:] * within[:, :-1]
-    lag = float(np.clip(np.nanmean(np.clip(pair, -9 * spread**2, 9 * spread**2)) / spread**2, 0, 0.9)) if spread else 0.0
+    lag = (
+        float(np.clip(np.nanmean(np.clip(pair, -9 * spread**2, 9 * spread**2)) / spread**2, 0, 0.9)) if spread else 0.0
+    )
     # A median's variance is π/2 of a mean's; points that err alike along the row count less (first-order process).
     expected = 0.5 * np.pi * spread**2 * (1 + lag) / (1 - lag) / count[enough]
     if spread == 0 or float(np.median(levels[enough] ** 2 / expected)) < STRIPED * 0.455:  # 0.455: median of χ² of 1
