@@ -115,6 +115,15 @@ def test_one_difficulty_at_a_time(change):
     assert kinds["pressure-integral"].u < 0.2 * truth.integral
 
 
+def test_an_amplifier_that_recovers_slowly_from_the_pick_up():
+    bench = Bench()
+    time, voltage, truth = record(bench, np.random.default_rng(2))
+    recovery = np.where(time > bench.trigger, 0.05 * np.exp(-np.maximum(time - bench.trigger, 0) / 3e-6), 0)
+    one = found(measure_trace(time, voltage + recovery, bench.setup))["pressure-integral"]
+    assert one.value == pytest.approx(truth.integral, rel=0.05, abs=0)
+    assert abs(one.value - truth.integral) < 4 * one.u
+
+
 @pytest.mark.parametrize("stated", [None, 0.03])
 def test_a_clipped_pulse_keeps_its_times_alone(stated):
     bench = Bench(range=0.03, pick_up=0.02)
@@ -219,3 +228,19 @@ def test_the_outline_shows_what_was_found_and_what_was_passed_over():
     assert {stroke.role for stroke in finding.outline.strokes} == {"found", "reference", "left-out"}
     assert finding.outline.caption.startswith("arrival 3.36")
     assert "Pa²·s" in finding.outline.caption
+
+
+@pytest.mark.parametrize("seed", range(12))
+def test_whatever_the_numbers_the_answer_is_a_finding_or_a_reason(seed):
+    rng = np.random.default_rng(seed)
+    n = int(rng.integers(64, 3000))
+    interval = float(10 ** rng.uniform(-9.5, -6))
+    time = -0.2e-6 + interval * np.arange(n)
+    spikes = np.where(rng.random(n) < 0.01, rng.normal(0, 1, n), 0)
+    voltage = [spikes, rng.normal(0, 1, n), np.cumsum(rng.normal(0, 1, n)), np.sign(rng.normal(0, 1, n))][seed % 4]
+    try:
+        finding = measure_trace(time, voltage, Bench().setup)
+    except Unmeasurable as reason:
+        assert reason.found
+        return
+    assert all(np.isfinite([one.value, one.u]).all() and one.u > 0 for one in finding.measured)

@@ -119,7 +119,7 @@ def pick_up(time: Array, deviation: Array, level: float, trigger: float, until: 
 
 
 def fit_baseline(time: Array, voltage: Array, quiet: NDArray[np.intp]) -> Baseline:
-    """Fit the baseline to the quiet samples: a polynomial, or a line and one hum, whichever the data ask for.
+    """Fit the baseline to the quiet samples: a polynomial, with or without one hum, whichever the data ask for.
 
     The choice is by the Bayesian information criterion (Schwarz 1978, Ann. Statist. 6, 461).
 
@@ -134,9 +134,10 @@ def fit_baseline(time: Array, voltage: Array, quiet: NDArray[np.intp]) -> Baseli
     centre, span = float(t.mean()), float(np.ptp(t)) or 1.0
     x = (t - centre) / span
     best: tuple[float, Array, Array, float | None] | None = None
-    for degree, cycles in [(0, None), (1, None), (2, None), (3, None), (1, _hum(x, v))]:
+    hum = _hum(x, v)
+    for degree, cycles in [(0, None), (1, None), (2, None), (3, None), (4, None), (1, hum), (3, hum)]:
         free = degree + 1 + (4 if cycles else 0)  # a frequency that was looked for counts for two
-        if x.size < free + 4 or (cycles is None and degree == 1 and best is None):
+        if x.size < free + 4:
             continue
         terms = _terms(x, degree, cycles)
         normal = np.linalg.pinv(terms.T @ terms)
@@ -162,12 +163,12 @@ def _terms(x: Array, degree: int, cycles: float | None) -> Array:
 
 
 def _hum(x: Array, v: Array) -> float | None:
-    """Return the cycles over the stretch of the sinusoid that explains most, beside a line; None where too short."""
+    """Return the cycles over the stretch of the sinusoid that explains most, beside a parabola; None where too short."""
     most = x.size / 8
     if most <= 1.0:
         return None
     grid = np.arange(0.75, most, 0.125)
-    terms = np.stack([_terms(x, 1, float(one)) for one in grid])
+    terms = np.stack([_terms(x, 2, float(one)) for one in grid])
     right = np.einsum("fnk,n->fk", terms, v)
     normal = np.einsum("fnk,fnl->fkl", terms, terms)
     explained = np.einsum("fk,fk->f", right, np.linalg.solve(normal, right[..., None])[..., 0])
