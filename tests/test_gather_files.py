@@ -47,7 +47,7 @@ def picture(path, grey=100, size=(24, 16), pages=1):
 
 
 def frames(folder, *names):
-    return [picture(folder / "frames" / name) for name in names]
+    return [picture(folder / "frames" / name, grey=100 + number) for number, name in enumerate(names)]
 
 
 @pytest.fixture
@@ -102,7 +102,7 @@ def test_a_pattern_gives_shot_and_delay_of_each_file(tmp_path, camera):
         ("s002", "frames/s002_1,25ns.png"): approx(1.25e-9, abs=0),
     }
     one = next(one for one in found.readings if one.kind == "bubble-radius")
-    assert (one.table, one.value, one.u) == ("camera", approx(200e-6, rel=1e-6), approx(2e-6))
+    assert (one.table, one.value, one.u) == ("camera", approx(202e-6, rel=1e-6), approx(2e-6))
     assert [one.kind for one in found.readings].count("shock-radius") == 4
     assert all(one.delay is not None for one in found.readings if one.kind == "shock-radius")
     assert found.refused == ()
@@ -264,6 +264,18 @@ def test_limits_remarks_refusals_and_checksums_are_kept(tmp_path, camera):
     assert [one.source for one in found.refused] == ["frames/s003_1ns.png"]
     sums = {file.path: file.sha256 for file in found.files}
     assert all(sums[f"frames/s00{n}_1ns.png"] == sha256_of(tmp_path / "frames" / f"s00{n}_1ns.png") for n in (1, 2, 3))
+
+
+def test_a_file_that_is_there_twice_counts_once_and_one_under_two_shots_is_pointed_out(tmp_path, camera):
+    for name in ("s001_1ns.png", "s001_1ns again.png", "s002_1ns.png"):
+        picture(tmp_path / "frames" / name)
+    found = read(write(tmp_path, more=FRAMES.format("{shot}_{delay}ns*.png")))
+    assert list(radii(found)) == [("s001", "frames/s001_1ns again.png"), ("s002", "frames/s002_1ns.png")]
+    assert [(one.source, one.note.partition(" of ")[0]) for one in found.notes] == [
+        ("frames/s001_1ns.png", "the same file as 'frames/s001_1ns again.png'; it counts once"),
+        ("frames/s002_1ns.png", "the same file as 'frames/s001_1ns again.png'"),
+    ]
+    assert len(found.files) == 6
 
 
 def test_the_background_is_read_once_and_frames_of_another_size_are_refused(tmp_path, camera, monkeypatch):

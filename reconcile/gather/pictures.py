@@ -79,9 +79,10 @@ class Pictures:
         """Take in what each file of a table gave."""
         readings: list[Reading] = []
         samples: dict[str, _Sample] = {}
+        firsts: dict[str, Source] = {}  # by the file's checksum
         for source, result in zip(sources, results, strict=True):
-            if result.sha256 is not None and result.name not in self.collected.files:
-                self.collected.files[result.name] = FileRead(result.name, result.sha256)
+            if self._is_copy(source, result, firsts):
+                continue
             for part in result.parts:
                 for note in part.notes:
                     self.collected.note(note.source, note.note)
@@ -96,6 +97,21 @@ class Pictures:
         return readings + [
             reading for name, sample in samples.items() for reading in self._of_sample(table, name, sample)
         ]
+
+    def _is_copy(self, source: Source, result: Result, firsts: dict[str, Source]) -> bool:
+        """Note the checksum of a file; return whether it is an earlier one again, which counts once."""
+        if result.sha256 is None:
+            return False
+        if result.name not in self.collected.files:
+            self.collected.files[result.name] = FileRead(result.name, result.sha256)
+        first = firsts.setdefault(result.sha256, source)
+        if first is source or any(part.refusal is not None for part in result.parts):
+            return False
+        if (first.target, first.delay) == (source.target, source.delay):
+            self.collected.note(source.name, f"the same file as '{first.name}'; it counts once")
+            return True
+        self.collected.note(source.name, f"the same file as '{first.name}' of '{first.target}': is one of them a copy?")
+        return False
 
     def _of_one(self, table: Table, source: Source, part: Part) -> list[Reading]:
         """Return the readings of one picture or trace."""
