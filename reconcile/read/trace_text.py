@@ -18,7 +18,8 @@ from reconcile.read.delimited import LARGEST, read_text
 from reconcile.read.headers import Layout, header_row, lay_out
 from reconcile.read.trace_types import UNITS, Array, Columns, TraceSettings, damaged
 
-_HEAD = 400  # lines in which headers are looked for: a recorder's settings take some dozens
+_HEAD = 200  # lines in which headers are looked for: a recorder's settings take some dozens
+_SIGNS = 60  # rows that settle the decimal sign; the parser refuses a later one that departs from them
 _DELIMITERS = (",", ";", "\t", "|")
 
 
@@ -68,10 +69,12 @@ def _head(text: str, name: str, delimiter: str | None, table: Table) -> tuple[Sh
     lines = text.split("\n", _HEAD)[:_HEAD]
     if delimiter is None and lines[0].strip().lower().startswith("sep=") and len(lines[0].strip()) == 5:
         delimiter = lines[0].strip()[4]
-    sheets = [(_cells(lines, name, one), one) for one in ([delimiter] if delimiter else _DELIMITERS)]
-    for sheet in sheets:
-        if header_row(sheet[0], table) is not None:
-            return sheet
+    sheets = []
+    for one in [delimiter] if delimiter else _DELIMITERS:
+        sheet = _cells(lines, name, one)
+        if header_row(sheet, table) is not None:
+            return sheet, one
+        sheets.append((sheet, one))
     return max(sheets, key=lambda sheet: sum(len(row.cells) > 1 for row in sheet[0].rows))
 
 
@@ -88,7 +91,8 @@ def _cells(lines: list[str], name: str, delimiter: str) -> Sheet:
 
 def _decimal(layout: Layout, name: str) -> str:
     numbers = layout.numbers.values()
-    texts = [cell.text for row in layout.below.values() for number in numbers if (cell := row.get(number)) is not None]
+    rows = list(layout.below.values())[:_SIGNS]
+    texts = [cell.text for row in rows for number in numbers if (cell := row.get(number)) is not None]
     try:
         return settle_decimal(texts) or "."
     except ValueError as error:
