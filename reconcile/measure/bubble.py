@@ -166,7 +166,8 @@ def _empty(contact: Contact, pitch: float, side: Side, shape: tuple[int, ...]) -
             "Raise the light.",
         )
     limit = max(5.0 * block, 8.0, 4.0 * contact.width)
-    faint = standing(scene, scene.block, max(_FAINT * (1.0 - scene.band), 5.0 * scene.noise / scene.block))
+    depth = max(_FAINT * (1.0 - scene.band), 5.0 * scene.noise / scene.block)
+    faint = standing(scene, scene.block, depth, 2.5 * contact.width)
     if faint is not None and faint.radius > max(limit, 3.0 * scene.block):
         raise Unmeasurable(
             "something faint on the target, too bright for a bubble and too dark for light",

@@ -20,6 +20,7 @@ _STEP = 0.5  # px between samples of a profile
 _GROUP = 4  # px of edge that one profile averages over: more than the blur correlates
 _MOST_PROFILES = 180
 _UNDECIDED = 0.1  # of the radius: standard deviation of the centre's height above the target before the outline is seen
+_FLOOR = 0.004  # px: error of the radius that stays on discs without noise, from the interpolation between pixels
 _LEAST_ARC = 50.0  # degrees; with less, a circle's radius hangs on noise
 
 
@@ -69,9 +70,9 @@ def refine_contact(scene: Scene, cap: Cap | None) -> Contact:
     centres = centres[(scene.row_of_edge(centres) > 4.0) & (scene.row_of_edge(centres) < rows - 3.0)]
     if len(centres) < 5:
         raise Unmeasurable(
-            f"a target whose edge is free over {len(centres) * _GROUP} pixels",
-            "its edge visible on at least one side of the bubble",
-            "Use a smaller magnification, or measure it by hand.",
+            f"a target whose edge lies free over {len(centres) * _GROUP} pixels only",
+            "its edge, sharp, on at least one side of the bubble",
+            "Focus on the site or use a smaller magnification, or measure it by hand.",
         )
     along = np.arange(-half, half + _STEP, _STEP)
     offsets = np.arange(_GROUP) - (_GROUP - 1) / 2
@@ -281,7 +282,7 @@ def _judged(
     # blurring moves a level line by curvature times half the variance, as diffusion does.
     shift = edges.width**2 / (2.0 * half_level)
     # The ripple's form is a guess: its shift counts in part as uncertainty.
-    u = np.sqrt(fit.covariance[2, 2] + edges.shape**2 + (0.15 * shift) ** 2 + (0.15 * fringes[0]) ** 2)
+    u = np.sqrt(fit.covariance[2, 2] + edges.shape**2 + (0.1 * shift) ** 2 + (0.15 * fringes[0]) ** 2 + _FLOOR**2)
     return Arc(
         centre=origin + x * along + y * away,
         height=y,

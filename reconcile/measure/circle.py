@@ -45,7 +45,7 @@ def fit_circle(points: Array, start: Array, level: tuple[float, float] | None = 
         arm = points - values[:2]
         distance = np.maximum(np.hypot(arm[:, 0], arm[:, 1]), 1e-9)
         residuals = distance - values[2]
-        scatter = _scatter(residuals)
+        scatter = max(_scatter(residuals), least)
         # At first the radius may be off by more than the points scatter.
         weights = (
             _biweight(residuals, scatter) if turn > 3 else _biweight(residuals - np.median(residuals), 3.0 * scatter)
@@ -99,7 +99,7 @@ def _inflation(residuals: Array, weights: Array, scatter: float, parameters: int
     """Return by how much the variance of the parameters exceeds that of independent residuals of the robust scatter.
 
     Two causes: parameters that were taken from the residuals, with the scatter's own estimate by weighted squares; and
-    neighbours that err together, by the sum of their correlations up to the first that is not positive.
+    neighbours that err together, by the sum of their correlations up to the first that may be chance.
     """
     used = weights > 0.05
     count = int(used.sum())
@@ -109,14 +109,17 @@ def _inflation(residuals: Array, weights: Array, scatter: float, parameters: int
     square = (
         float(np.sum(weights[used] * kept**2) / np.sum(weights[used])) / 0.83
     )  # of normal errors under the biweight
-    variance = max(max(square, 0.5 * scatter**2) * count / (count - parameters), least**2) / scatter**2
+    variance = max(square, 0.5 * scatter**2) * count / (count - parameters) / scatter**2
+    if least > 0.0:
+        # Few points say little of their own variance; what the noise gives weighs as much as ten of them.
+        variance = max(variance, (variance * count + 10.0 * (least / scatter) ** 2) / (count + 10.0))
     centred = kept - kept.mean()
     power = float(centred @ centred)
     together = 1.0
     for lag in range(1, max(2, count // 4)):
         # The fit itself makes neighbours differ: about -parameters/count of correlation at every lag.
         correlation = float(centred[:-lag] @ centred[lag:]) / max(power, 1e-30) + parameters / count
-        if correlation < 2.0 / np.sqrt(count) and lag > 1 or correlation <= 0.0:
+        if correlation < (1.0 if lag == 1 else 2.0) / np.sqrt(count):
             break
         together += 2.0 * correlation
     return variance * min(together, 6.0)

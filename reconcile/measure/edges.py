@@ -66,7 +66,7 @@ def find_edges(profiles: Array, along: Array, guess: Array, width: float, reach:
             used = np.isfinite(part).all(axis=1)
             bend = np.sum((miss * z * slope)[used]) / max(float(np.sum((z * z * slope**3)[used])), 1e-12)
             width = float(np.clip(width * (1.0 - np.clip(bend, -0.3, 0.3)), 0.35, widest))
-        if np.nanmax(np.abs(move), initial=0.0) < 2e-3 * width and (not free or abs(bend) < 2e-3):
+        if np.abs(np.nan_to_num(move)).max() < 2e-3 * width and (not free or abs(bend) < 2e-3):
             break
     position = np.where(np.isfinite(step), position, np.nan)
     return Edges(position, dark, bright, width, _shape(part, along, position, width))
@@ -76,7 +76,7 @@ def _level(profiles: Array, along: Array, start: Array, reach: float) -> Array:
     """Return the median of each profile over `reach` from `start` on, steadied by its neighbours."""
     step = float(along[1] - along[0])
     number = min(max(2, round(reach / step)), len(along))
-    first = np.clip(np.ceil((start - along[0]) / step).astype(int), 0, len(along) - number)
+    first = np.clip(np.ceil(np.nan_to_num((start - along[0]) / step)).astype(int), 0, len(along) - number)
     level = np.median(np.take_along_axis(profiles, first[:, None] + np.arange(number), axis=1), axis=1)
     return median_filter(level, size=min(5, len(level)), mode="nearest")
 

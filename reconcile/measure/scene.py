@@ -208,7 +208,7 @@ def _edge_of_band(dark: NDArrayBool) -> tuple[float, float]:
     return float(intercept), float(slope)
 
 
-def standing(scene: Scene, block: int, depth: float) -> Cap | None:
+def standing(scene: Scene, block: int, depth: float, margin: float = 0.0) -> Cap | None:
     """Return the largest thing on the target that is darker than the light by `depth` (0 to 1), or None.
 
     Parameters
@@ -216,14 +216,16 @@ def standing(scene: Scene, block: int, depth: float) -> Cap | None:
     scene : the frame
     block : pixels along one side of the blocks in which it is looked for
     depth : how much darker than the light
+    margin : how far above the target's edge its blur reaches [px]
     """
+    margin = max(1.2 * block, margin)
     ratio = averaged(scene.flat, block)
     rows = (np.arange(ratio.shape[0]) + 0.5) * block - 0.5
     columns = (np.arange(ratio.shape[1]) + 0.5) * block - 0.5
     height = scene.above(columns[None, :], rows[:, None])
-    mask = (ratio < 1.0 - depth) & (height > 1.2 * block)
+    mask = (ratio < 1.0 - depth) & (height > margin)
     labels, number = ndimage.label(mask)
-    low = np.setdiff1d(np.unique(labels[(height < 3.0 * block) & mask]), 0)
+    low = np.setdiff1d(np.unique(labels[(height < margin + 2.0 * block) & mask]), 0)
     if not number or not len(low):
         return None
     sizes = ndimage.sum_labels(mask, labels, low)
