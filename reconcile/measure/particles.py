@@ -8,7 +8,7 @@ another sample of as many particles would differ. What all diameters share (the 
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
@@ -48,7 +48,7 @@ class _Bins:
     low: Floats  # (bins,) may be -inf
     high: Floats  # (bins,) may be inf
     count: Floats  # (bins,)
-    n: int
+    n: float  # particles; of weighted ones as many equal ones as tell as much
 
 
 @dataclass(frozen=True, slots=True)
@@ -59,7 +59,7 @@ class _Fit:
     covariance: Floats  # the same, squared; 0 for a parameter at its bound
     log_likelihood: float
 
-    def bic(self, n: int) -> float:
+    def bic(self, n: float) -> float:
         """Bayesian information criterion; smaller is better."""
         return self.parameters.size * math.log(n) - 2 * self.log_likelihood
 
@@ -108,18 +108,21 @@ def from_counts(lower: ArrayLike, upper: ArrayLike, count: ArrayLike) -> Sizes:
     if np.count_nonzero(occupied) < 2:
         raise ValueError("All particles lie in one bin: their median and spread cannot be told.")
     with np.errstate(divide="ignore"):  # ln 0 is -inf: an open first bin
-        bins = _Bins(np.log(low[occupied]), np.log(high[occupied]), counts[occupied], round(counts.sum()))
+        bins = _Bins(np.log(low[occupied]), np.log(high[occupied]), counts[occupied], float(counts.sum()))
     note = "gaps between the bins were closed at their middle" if closed else None
     return _measure(bins, note)
 
 
-def from_diameters(diameters: ArrayLike) -> Sizes:
+def from_diameters(diameters: ArrayLike, weights: ArrayLike | None = None) -> Sizes:
     """Measure a sample from the diameters of its particles.
 
     Parameters
     ----------
     diameters : ArrayLike
         (n,) One a particle [m].
+    weights : ArrayLike
+        (n,) Above 0: how many particles each of them stands for, up to a common factor (the inverse of its chance to be
+        measured); None: all alike.
 
     Returns
     -------
@@ -129,17 +132,27 @@ def from_diameters(diameters: ArrayLike) -> Sizes:
     Raises
     ------
     ValueError
-        With a sentence, where a diameter is not above 0 or there are too few.
+        With a sentence, where a diameter or a weight is not above 0 or there are too few.
+
+    Notes
+    -----
+    Weighted particles count together as (Σw)²/Σw² equal ones (Kish 1965, Survey Sampling, from memory).
+
     """
     sizes = np.atleast_1d(np.asarray(diameters, dtype=float))
     if sizes.ndim != 1 or not np.all(np.isfinite(sizes)) or np.any(sizes <= 0):
         raise ValueError("Each particle needs a diameter above 0.")
     _check_counts(np.ones_like(sizes))
-    values, counts = np.unique(np.log(sizes), return_counts=True)
+    shares = np.ones_like(sizes) if weights is None else np.atleast_1d(np.asarray(weights, dtype=float))
+    if shares.shape != sizes.shape or not np.all(np.isfinite(shares)) or np.any(shares <= 0):
+        raise ValueError("Each particle needs a weight above 0.")
+    values, index = np.unique(np.log(sizes), return_inverse=True)
     if values.size < 2:
         raise ValueError("All particles have the same diameter: their spread cannot be told.")
     half = 0.5 * RESOLUTION
-    return _measure(_Bins(values - half, values + half, counts.astype(float), sizes.size), None)
+    counts = np.bincount(index.ravel(), shares) * (shares.sum() / np.sum(shares**2))
+    found = _measure(_Bins(values - half, values + half, counts, float(counts.sum())), None)
+    return replace(found, n=sizes.size)
 
 
 def _check_counts(counts: Floats) -> None:
@@ -203,7 +216,7 @@ def _sizes(bins: _Bins, fit: _Fit, note: str | None) -> Sizes:
     u_mean = math.sqrt(fit.covariance[0, 0]) * correction
     u_spread = spread * u_log_s
     median, geometric_sd = math.exp(mean), math.exp(spread)
-    return Sizes(median, median * u_mean, geometric_sd, geometric_sd * u_spread, bins.n, note)
+    return Sizes(median, median * u_mean, geometric_sd, geometric_sd * u_spread, round(bins.n), note)
 
 
 def _fit_one(bins: _Bins) -> _Fit:
