@@ -378,14 +378,14 @@ def test_the_micrographs_of_a_sample_are_measured_together(tmp_path, monkeypatch
 
     def measure(frame, pixel_pitch):
         diameters = share[round(float(frame.mean()) * 255)]
-        return SimpleNamespace(diameters=diameters, outline=NOTHING, remarks=("seen",))
+        return SimpleNamespace(diameters=diameters, weights=diameters / 8e-9, outline=NOTHING, remarks=("seen",))
 
     monkeypatch.setattr(measuring, "measure_micrograph", measure)
     for name, grey in (("A_1", 10), ("A_2", 20), ("B_1", 30)):
         picture(tmp_path / "tem" / f"{name}.png", grey=grey)
     (tmp_path / "tem" / "A_3.png").write_bytes(b"")
     found = read(write(tmp_path, SAMPLES, more=MICROGRAPHS, log=SAMPLE_LOG))
-    together = from_diameters(sizes)
+    together = from_diameters(sizes, sizes / 8e-9)
     median, spread = (one for one in found.readings if one.sample == "A")
     assert (median.kind, median.value, median.u) == (
         "median-diameter",
@@ -403,7 +403,9 @@ def test_the_micrographs_of_a_sample_are_measured_together(tmp_path, monkeypatch
 def test_a_micrograph_named_by_its_shot_belongs_to_the_shots_sample(tmp_path, monkeypatch):
     sizes = np.linspace(5e-9, 9e-9, 30)
     monkeypatch.setattr(
-        measuring, "measure_micrograph", lambda *_: SimpleNamespace(diameters=sizes, outline=NOTHING, remarks=())
+        measuring,
+        "measure_micrograph",
+        lambda *_: SimpleNamespace(diameters=sizes, weights=np.ones(30), outline=NOTHING, remarks=()),
     )
     picture(tmp_path / "tem" / "s003.png")
     found = read(write(tmp_path, SAMPLES, more=MICROGRAPHS.replace("{sample}_{frame}", "{shot}"), log=SAMPLE_LOG))

@@ -17,12 +17,13 @@ from reconcile.gather.overlays import draw_picture, draw_trace
 from reconcile.measure.bubble import Side, measure_frame
 from reconcile.measure.crater import measure_map
 from reconcile.measure.measured import Measured, Unmeasurable
+from reconcile.measure.micrograph import measure_micrograph
 from reconcile.measure.trace import ProbeSetup, measure_trace
 from reconcile.read.images import Frames, read_frames
 from reconcile.read.surfaces import read_surface
 from reconcile.read.traces import TraceSettings, read_trace
 
-Frame = NDArray[np.float32]
+Array = NDArray[np.float64]
 
 FAULT = "This is a fault of the program: please report it with the file."
 
@@ -62,7 +63,7 @@ class Part:
 
     place: Place
     measured: tuple[Measured, ...] = ()
-    diameters: tuple[float, ...] | None = None  # [m] of the particles in a micrograph; None: it is none
+    particles: tuple[tuple[float, float], ...] | None = None  # of a micrograph: diameter [m], weight; None: it is none
     delay: float | None = None  # [s]
     notes: tuple[Note, ...] = ()
     refusal: Refusal | None = None
@@ -173,8 +174,12 @@ def _frames(job: Job) -> Iterator[Part]:
         yield _attempt(place, partial(_frame, frames, number, place, job, overlay))
 
 
+def _numbers(frame: NDArray[np.float32]) -> Array:
+    return np.asarray(frame, dtype=np.float64)
+
+
 def _frame(frames: Frames, number: int, place: Place, job: Job, overlay: Path | None) -> Part:
-    settings, frame = job.settings, frames[number]
+    settings, frame = job.settings, _numbers(frames[number])
     background = _background_for(frame, place, settings)
     finding = measure_frame(frame, settings.pixel_pitch, settings.target_edge, background, frames.saturated)
     delay = (job.delay or 0.0) + number * (settings.frame_interval or 0.0)
@@ -184,7 +189,7 @@ def _frame(frames: Frames, number: int, place: Place, job: Job, overlay: Path | 
 
 
 @lru_cache(maxsize=1)
-def read_background(path: str, name: str) -> Frame:
+def read_background(path: str, name: str) -> Array:
     """Return the empty frame of a table, the mean of its pages; raises Refusal.
 
     It is read once in each process, as long as the table is at work.
@@ -200,12 +205,12 @@ def read_background(path: str, name: str) -> Frame:
                 remedy="Give a background of one page.",
             )
         total += frame
-    mean = (total / len(frames)).astype(np.float32)
+    mean: Array = total / len(frames)
     mean.setflags(write=False)  # it is shared by all frames
     return mean
 
 
-def _background_for(frame: Frame, place: Place, settings: Settings) -> Frame | None:
+def _background_for(frame: Array, place: Place, settings: Settings) -> Array | None:
     if settings.background is None:
         return None
     background = read_background(*settings.background)
@@ -263,13 +268,12 @@ def _micrograph(job: Job) -> Iterator[Part]:
 
 
 def _particles(frames: Frames, number: int, place: Place, job: Job, overlay: Path | None) -> Part:
-    from reconcile.measure.micrograph import measure_micrograph
-
-    frame = frames[number]
+    frame = _numbers(frames[number])
     particles = measure_micrograph(frame, job.settings.pixel_pitch)
     notes = _notes(place, (*(frames.notes if number == 0 else ()), *particles.remarks))
     drawn = draw_picture(frame, particles.outline, overlay)
-    return Part(place, (), tuple(float(size) for size in particles.diameters), None, notes, None, drawn)
+    found = zip(particles.diameters.tolist(), particles.weights.tolist(), strict=True)
+    return Part(place, (), tuple(found), None, notes, None, drawn)
 
 
 def _drawing(job: Job, number: int) -> Path | None:

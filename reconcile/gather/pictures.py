@@ -90,7 +90,7 @@ class Pictures:
                     self.drawn[str(part.place)] = part.overlay
                 if part.refusal is not None:
                     self.collected.refuse_reading(part.refusal)
-                elif part.diameters is not None:
+                elif part.particles is not None:
                     samples.setdefault(source.target, _Sample(part.place)).add(part, source)
                 else:
                     readings += self._of_one(table, source, part)
@@ -144,7 +144,7 @@ class Pictures:
     def _of_sample(self, table: Table, name: str, sample: _Sample) -> list[Reading]:
         """Return what the particles of all micrographs of a sample say together; its place is the first of them."""
         try:
-            sizes = from_diameters(sample.diameters)
+            sizes = from_diameters(*_columns(sample.particles))
         except ValueError as sentence:
             self.collected.refuse_reading(
                 Refusal(
@@ -172,20 +172,24 @@ class _Sample:
     """The particles of one sample so far."""
 
     place: Place  # its first micrograph
-    diameters: list[float] = field(default_factory=list)  # [m]
+    particles: list[tuple[float, float]] = field(default_factory=list)  # diameter [m], weight
     pictures: int = 0
     set_aside: str | None = None
 
     def add(self, part: Part, source: Source) -> None:
         """Take in one micrograph."""
-        self.diameters += part.diameters or ()
+        self.particles += part.particles or ()
         self.pictures += 1
         self.set_aside = self.set_aside or source.set_aside
 
 
+def _columns(particles: list[tuple[float, float]]) -> tuple[list[float], list[float]]:
+    return [diameter for diameter, _ in particles], [weight for _, weight in particles]
+
+
 def _counted(sample: _Sample) -> str:
     several = "s" if sample.pictures > 1 else ""
-    return f"{len(sample.diameters)} particles of {sample.pictures} micrograph{several}"
+    return f"{len(sample.particles)} particles of {sample.pictures} micrograph{several}"
 
 
 class _Teller:

@@ -37,6 +37,7 @@ kind = "probe-trace"
 name = "hydrophone"
 files = "traces/{shot}.*"
 columns = { time = "t (us)", voltage = "U (V)" }
+full_scale = "1 V"
 
 [[readings]]
 kind = "crater-map"
