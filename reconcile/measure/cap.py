@@ -164,7 +164,7 @@ def fit_arc(contact: Contact, cap: Cap, full: Mask | None) -> Arc:
     offset, mean = mean_profile(profiles, longer, edges.position[good])
     noise = 1.25 * scene.noise / float(step) / float(np.sqrt(seen.rays * good.sum()))
     fringes = fringe_shift(offset, mean, edges.width, noise)
-    return _judged(contact, fit, edges, good, points, origin, float(np.mean(saturated[clear] >= 0.2)), fringes)
+    return _judged(contact, fit, edges, good, points, origin, (float(np.mean(saturated[clear] >= 0.2)), *fringes))
 
 
 def _angles(place: Array, contact: Contact, blur: float) -> tuple[Array, int]:
@@ -264,10 +264,13 @@ def _judged(
     good: Mask,
     points: Array,
     origin: Array,
-    saturated: float,
-    fringes: tuple[float, float],
+    beside: tuple[float, float, float],
 ) -> Arc:
-    """Turn the fitted circle into a radius with its uncertainty."""
+    """Turn the fitted circle into a radius with its uncertainty.
+
+    `beside`: the part of the outline before saturated light; the shift and the amplitude of fringes.
+    """
+    saturated, by_fringes, fringes = beside
     along, away = _directions(contact.scene.slope)
     x, y, half_level = (float(value) for value in fit.values)
     used = fit.weights > 0.05
@@ -282,13 +285,13 @@ def _judged(
     # blurring moves a level line by curvature times half the variance, as diffusion does.
     shift = edges.width**2 / (2.0 * half_level)
     # The ripple's form is a guess: its shift counts in part as uncertainty.
-    u = np.sqrt(fit.covariance[2, 2] + edges.shape**2 + (0.1 * shift) ** 2 + (0.15 * fringes[0]) ** 2 + _FLOOR**2)
+    u = np.sqrt(fit.covariance[2, 2] + edges.shape**2 + (0.1 * shift) ** 2 + (0.15 * by_fringes) ** 2 + _FLOOR**2)
     return Arc(
         centre=origin + x * along + y * away,
         height=y,
         u_height=float(np.hypot(np.sqrt(fit.covariance[1, 1]), contact.u_height)),
         half_level=half_level,
-        radius=half_level + shift + fringes[0],
+        radius=half_level + shift + by_fringes,
         u=float(u),
         width=edges.width,
         coverage=coverage,
@@ -298,7 +301,7 @@ def _judged(
         points=origin + points[:, :1] * along + points[:, 1:] * away,
         used=used,
         saturated=saturated,
-        fringes=fringes[1],
+        fringes=fringes,
     )
 
 

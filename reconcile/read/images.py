@@ -213,8 +213,34 @@ def _png(path: Path, name: str, columns: int, rows: int, bits: int, colour: int,
         raise _no_grey(name, "a palette of colours")
     if bits not in (8, 16) or colour not in (0, 2, 4, 6):
         raise _no_grey(name, f"pixels of {bits} bits")
-    frame, bits, lost = _decoded(path, 0, (columns, rows), bits, name)
-    return Frames(path, name, bits, 1.0, (*notes, *lost), frame)
+    frame, read_bits, lost = _decoded(path, 0, (columns, rows), bits, name)
+    if not frame[-2:].any(axis=1).all():
+        # Pillow leaves rows that the file does not hold at zero, without a word.
+        needed = rows * columns * {0: 1, 2: 3, 4: 2, 6: 4}[colour] * bits // 8 + rows
+        held = _unpacked_length(path, needed)
+        if held < needed:
+            raise _damaged(name, f"{held} bytes of pixels, unpacked, in place of {needed}")
+    return Frames(path, name, read_bits, 1.0, (*notes, *lost), frame)
+
+
+def _unpacked_length(path: Path, enough: int) -> int:
+    """Return how many bytes the pixels of a sound PNG file unpack to, counted no further than `enough`.
+
+    A picture stored in interlaced passes needs a few bytes more than a plain one, never fewer.
+    """
+    unpacker, held = zlib.decompressobj(), 0
+    with path.open("rb") as stream:
+        stream.seek(len(_PNG))
+        while held < enough and not unpacker.eof:
+            length, kind = struct.unpack(">I4s", stream.read(8))
+            packed = stream.read(length)
+            stream.seek(4, 1)
+            while kind == b"IDAT" and packed and held < enough and not unpacker.eof:
+                held += len(unpacker.decompress(packed, 1 << 20))
+                packed = unpacker.unconsumed_tail
+            if kind == b"IEND":
+                break
+    return held
 
 
 def _no_grey(place: str, found: str) -> Refusal:
