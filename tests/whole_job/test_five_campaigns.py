@@ -29,6 +29,8 @@ from reconcile.inference.verdicts import absorbed_draws
 STORED = Path(__file__).parents[1] / "data" / "campaigns"
 FRESH, SEEDS = 101, (102, 103, 104, 105)
 
+pytestmark = pytest.mark.slow
+
 
 @dataclass(frozen=True)
 class Score:
