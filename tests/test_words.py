@@ -102,6 +102,15 @@ def test_the_campaign_that_the_readme_shows_is_taken_as_it_stands(tmp_path):
     assert gathered.refused == ()
 
 
+def test_the_tables_of_images_and_traces_that_the_readme_shows_are_taken_as_they_stand(tmp_path):
+    first, second = (part.split("\n```", 1)[0] for part in README.split("```toml\n")[1:3])
+    (tmp_path / "campaign.toml").write_text(f"{first}\n{second}\n", encoding="utf-8")
+    tables = load(tmp_path).tables
+    assert [table.kind for table in tables[2:]] == ["shadowgraph", "shadowgraph", "probe-trace", "crater-map"]
+    assert tables[2].options["target_edge"] == "bottom"
+    assert tables[3].options["frame_interval"].value == pytest.approx(1e-6, abs=0)
+
+
 def write_workbook(path, sheet, rows):
     workbook = Workbook()
     workbook.active.title = sheet
