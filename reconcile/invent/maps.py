@@ -35,7 +35,7 @@ class Crater:
         by_law = local / self.excess * np.exp(self.exponent * (local - self.excess))
         step = -np.expm1(-local / STEP_DECAY) / -np.expm1(-self.excess / STEP_DECAY)
         below = self.depth * ((1 - self.step_share) * by_law + self.step_share * step)
-        beyond = np.maximum(distance - self.diameter / 2, 0) / (0.06 * self.diameter)
+        beyond = np.maximum(distance - self.diameter / 2, 0) / (0.03 * self.diameter)
         return np.asarray(self.rim * beyond * np.exp(1 - beyond) - below)
 
     @property

@@ -20,6 +20,7 @@ ELECTRONS = 12_000  # of a full pixel of the camera
 READ_NOISE = 10.0  # [electrons]
 OFFSET = 0.02  # [1] of the full range, added by the camera
 DARK = 0.045  # [1] share of the light that gets through a bubble or round the target
+UNEVEN = 0.001  # [1] height of each wave round a bubble's edge, over its radius
 BRIGHT_SPOT = 0.22  # [1] radius of the spot of light that goes straight through, over the bubble's
 
 
@@ -90,7 +91,7 @@ def _seen(camera: Camera, scene: Scene, rng: np.random.Generator) -> Array:
     above = (row - y + np.tan(tilt) * x) * np.cos(tilt) + _roughness(rng, camera.width)  # height over the surface
     seen = np.ones_like(above)
     if scene.radius is not None:
-        seen *= _bubble(x, y - row, scene.radius / camera.pitch, float(rng.uniform(0.5, 0.9)))
+        seen *= _bubble(x, y - row, scene.radius / camera.pitch, rng)
     if scene.shock_radius is not None:
         seen *= _ring(np.hypot(x, y - row) - scene.shock_radius / camera.pitch)
     glare = 1 + 0.12 * np.sin(x / 40 + rng.uniform(0, 6)) * np.exp(-np.maximum(above, 0) / 3)
@@ -112,9 +113,16 @@ def _fine_grid(width: int, height: int) -> tuple[Array, Array]:
     return columns, rows
 
 
-def _bubble(x: Array, y: Array, radius: float, spot: float) -> Array:
-    """Return the light that comes through a bubble, fringe outside its edge and spot in its middle included."""
-    outside = np.hypot(x, y) - radius  # [px] of the edge
+def _bubble(x: Array, y: Array, radius: float, rng: np.random.Generator) -> Array:
+    """Return the light that comes through a bubble, fringe outside its edge and spot in its middle included.
+
+    Its edge departs a little from a circle by waves of mean zero round the half disc. The longest, which a circle of
+    another size would follow, is the lowest: the radius is then the same to 0.1 % however it is defined.
+    """
+    spot, angle = float(rng.uniform(0.5, 0.9)), np.arctan2(-y, x)
+    heights = UNEVEN * rng.standard_normal(7) * np.array([0.4, 1, 1, 1, 1, 1, 1])
+    waves = sum(height * np.cos(n * angle) for n, height in enumerate(heights, start=2))
+    outside = np.hypot(x, y) - radius * (1 + waves)  # [px] of the edge
     beyond = np.maximum(outside, 0)
     fringe = 1 + 0.16 * np.exp(-beyond / 3.5) * np.sin(2 * np.pi * beyond / 7.0)
     across = np.hypot(x, y + 0.32 * radius) / (BRIGHT_SPOT * radius)
