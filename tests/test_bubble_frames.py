@@ -162,6 +162,23 @@ def test_area_and_outline_that_differ_are_said_so() -> None:
     assert any("dark area" in remark or "departs from the circle" in remark for remark in finding.remarks)
 
 
+@pytest.mark.parametrize(("shock", "electrons"), [(70.0, 4000.0), (130.0, 400.0)])
+def test_a_shock_front_is_measured_where_it_is_seen(shock: float, electrons: float) -> None:
+    bench = Bench(radius=30.0, shock=shock, electrons=electrons, dust=10)
+    finding = measure_frame(draw(bench, 12), PITCH, "bottom")
+    assert radius_of(finding)[0] == pytest.approx(30.0, abs=0.2)
+    assert [measured.kind for measured in finding.measured] == ["bubble-radius", "shock-radius"]
+    value, u = finding.measured[1].value, finding.measured[1].u
+    assert value is not None and u is not None
+    assert abs(value / PITCH - shock) < min(2.0 * u / PITCH, 1.0)
+
+
+def test_no_shock_front_is_seen_where_there_is_none() -> None:
+    for name in ("dust", "fringes", "noisy", "uneven"):
+        _, frame = some(name, 77)
+        assert len(measure_frame(frame, PITCH, "bottom").measured) == 1
+
+
 def test_the_scale_of_the_levels_does_not_matter() -> None:
     frame = draw(Bench(), 11)
     first = measure_frame(frame, PITCH, "bottom")

@@ -14,6 +14,7 @@ import numpy as np
 from reconcile.measure.cap import Arc, Contact, Mask, fit_arc, radius_from_area, refine_contact
 from reconcile.measure.measured import Array, Finding, Measured, Outline, Stroke, Unmeasurable
 from reconcile.measure.scene import Cap, Scene, look, standing
+from reconcile.measure.shock import shock_ring
 
 Side = Literal["bottom", "top", "left", "right"]
 
@@ -43,7 +44,8 @@ def measure_frame(
     Returns
     -------
     Finding
-        `bubble-radius` [m], of the circle through the outline; a limit where the frame is sharp and empty.
+        `bubble-radius` [m], of the circle through the outline; a limit where the frame is sharp and empty;
+        `shock-radius` where a ring about the site is clear.
 
     Raises
     ------
@@ -180,22 +182,39 @@ def _empty(contact: Contact, pitch: float, side: Side, shape: tuple[int, ...]) -
 
 def _finding(contact: Contact, arc: Arc, pitch: float, side: Side, shape: tuple[int, ...]) -> Finding:
     scene = contact.scene
-    by_area = radius_from_area(scene, arc, max(3.0, 2.5 * contact.width)) + arc.radius - arc.half_level
+    margin = max(3.0, 2.5 * contact.width)
+    by_area = radius_from_area(scene, arc, margin) + arc.radius - arc.half_level
     remarks = _remarks(arc, by_area, scene.noise, pitch)
-    turned = np.linspace(0.0, 2.0 * np.pi, 361)
-    circle = arc.centre + arc.radius * np.column_stack([np.cos(turned), np.sin(turned)])
-    circle = circle[scene.above(circle[:, 0], circle[:, 1]) >= -1.0]
-    first = np.argmax(np.hypot(*np.diff(circle, axis=0, append=circle[:1]).T)) + 1
-    circle = np.roll(circle, -int(first), axis=0)  # the gap below the target belongs at the ends
     strokes = [
-        Stroke(_back(circle, side, shape), "found"),
+        Stroke(_back(_above(scene, arc.centre, arc.radius), side, shape), "found"),
         _edge_stroke(scene, side, shape),
     ]
     if (~arc.used).any():
         strokes.append(Stroke(_back(arc.points[~arc.used], side, shape), "left-out", marks=True))
     value, u = arc.radius * pitch, arc.u * pitch
     caption = f"bubble radius {value * 1e6:.5g} um ± {u * 1e6:.2g} um, arc {arc.coverage:.0f}°, blur {arc.width:.1f} px"
-    return Finding((Measured("bubble-radius", value, u),), Outline(tuple(strokes), caption), remarks)
+    measured = [Measured("bubble-radius", value, u)]
+    site = np.array([arc.centre[0], float(scene.row_of_edge(arc.centre[0]))])
+    inner = 1.1 * arc.radius + 4.0 * arc.width + 8.0  # clear of the bubble's own fringes
+    ring = shock_ring(scene.flat, site, scene.slope, inner, margin)
+    if ring is not None:
+        measured.append(Measured("shock-radius", ring[0] * pitch, ring[1] * pitch))
+        strokes.append(Stroke(_back(_above(scene, site, ring[0]), side, shape), "found"))
+        caption += f"; shock radius {ring[0] * pitch * 1e6:.4g} um"
+    return Finding(tuple(measured), Outline(tuple(strokes), caption), remarks)
+
+
+def _above(scene: Scene, centre: Array, radius: float) -> Array:
+    """Return the part of a circle above the target's edge and within the frame, as one line of points."""
+    turned = np.linspace(0.0, 2.0 * np.pi, 361)
+    circle = centre + radius * np.column_stack([np.cos(turned), np.sin(turned)])
+    high, wide = scene.flat.shape
+    inside = (circle >= -0.5).all(axis=1) & (circle[:, 0] < wide) & (circle[:, 1] < high)
+    circle = circle[inside & (scene.above(circle[:, 0], circle[:, 1]) >= -1.0)]
+    if len(circle) < 2:
+        return circle
+    first = np.argmax(np.hypot(*np.diff(circle, axis=0, append=circle[:1]).T)) + 1
+    return np.roll(circle, -int(first), axis=0)  # the widest gap belongs at the ends
 
 
 def _edge_stroke(scene: Scene, side: Side, shape: tuple[int, ...]) -> Stroke:
