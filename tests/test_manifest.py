@@ -188,7 +188,9 @@ def test_a_property_of_an_unknown_material_can_stand_in_the_manifest(tmp_path):
         write(
             tmp_path / "b",
             ('material = "gold"', f'material = "unobtainium"\n{stated.replace("9000 1", "1.5")}'),
-            more='[priors]\nabsorbed_fraction = "beta(2, 4)"\n',
+            more='[priors]\nabsorbed_fraction = "beta(2, 4)"\nheated_depth = "lognormal(90 nm, 50 %)"\n'
+            'removal_energy_density = "lognormal(7e9 J/m3, 50 %)"\nmelt_surface_tension = "fixed(0.4 N/m)"\n'
+            'melt_viscosity = "fixed(2 mPa s)"\n',
         )
     )
     assert campaign.target.properties["density"].value == 9000.0

@@ -1,23 +1,30 @@
-"""What is known of gold and water, what a manifest may state instead, and what is refused."""
+"""What is known of metals and liquids, what a manifest may state instead, and what is refused."""
 
 from __future__ import annotations
 
 import dataclasses
+import math
 from pathlib import Path
 
 import pytest
 from iapws import IAPWS95
 
-from reconcile.campaign.campaign import Beam, Campaign, EnergyMeter, Liquid, Quantity, Table, Target
+from reconcile.campaign.campaign import Beam, Campaign, EnergyMeter, Liquid, Prior, Quantity, Table, Target
+from reconcile.campaign.inputs import INPUTS
 from reconcile.campaign.materials import (
+    PRIORS_OF_METAL,
     PROPERTY_NAMES,
+    default_prior_texts,
     known_liquids,
     known_materials,
+    landmark_energy,
+    melting_energies,
     optical_constants,
     properties_of_liquid,
     properties_of_target,
     property_rows,
 )
+from reconcile.campaign.prior_text import parse_prior
 from reconcile.campaign.refusal import Place, Refusal
 from reconcile.physics.matter import Fluid, Metal
 
@@ -26,7 +33,13 @@ def q(value: float, unit: str = "1") -> Quantity:
     return Quantity(value, None, unit, f"{value:g} {unit}")
 
 
-def campaign(target: Target | None = None, liquid: Liquid | None = None, celsius: float = 20.0, nm: float = 1030.0):
+def campaign(
+    target: Target | None = None,
+    liquid: Liquid | None = None,
+    celsius: float = 20.0,
+    nm: float = 1030.0,
+    priors: tuple[str, ...] = (),
+):
     return Campaign(
         name="basin",
         folder=Path("basin"),
@@ -38,6 +51,7 @@ def campaign(target: Target | None = None, liquid: Liquid | None = None, celsius
         tables=(),
         ambient_pressure=q(101325.0, "Pa"),
         liquid_temperature=q(celsius + 273.15, "K"),
+        priors={name: Prior("fixed", 0.1, 0.0, "fixed(0.1)") for name in priors},
     )
 
 
@@ -100,8 +114,9 @@ def test_every_row_has_a_source_and_the_unit_that_a_manifest_would_state():
         for row in property_rows(table):
             assert row.source, row
             assert row.unit == PROPERTY_NAMES[table][row.name], row
-    assert known_materials() == ("gold",)
-    assert known_liquids() == ("water",)
+    assert all(row.source and row.unit for row in property_rows("melting"))
+    assert known_materials() == ("gold", "silver", "copper", "platinum", "titanium", "aluminium", "iron")
+    assert known_liquids() == ("water", "ethanol", "acetone")
 
 
 def test_a_stated_property_takes_the_place_of_the_known_one():
@@ -113,16 +128,17 @@ def test_a_stated_property_takes_the_place_of_the_known_one():
     assert (water.refractive_index, water.sound_speed, water.density) == (1.35, 1500.0, pytest.approx(998.207))
 
 
-SILVER = {
-    "density": q(10490.0, "kg/m3"),
-    "sound_speed": q(3230.0, "m/s"),
-    "hugoniot_slope": q(1.6),
-    "melt_density": q(8500.0, "kg/m3"),
+ZINC = {
+    "density": q(7134.0, "kg/m3"),
+    "sound_speed": q(3010.0, "m/s"),
+    "hugoniot_slope": q(1.58),
+    "melt_density": q(6200.0, "kg/m3"),
 }
 
 
 def test_an_unknown_metal_is_taken_when_all_is_stated():
-    assert properties_of_target(campaign(Target("silver", properties=SILVER))).melt_density == 8500.0
+    stated = campaign(Target("zinc", properties=ZINC), priors=PRIORS_OF_METAL)
+    assert properties_of_target(stated).melt_density == 6200.0
 
 
 def test_an_unknown_liquid_is_taken_when_all_is_stated():
@@ -135,12 +151,31 @@ def test_an_unknown_liquid_is_taken_when_all_is_stated():
 
 @pytest.mark.parametrize("missing", PROPERTY_NAMES["target"])
 def test_an_unknown_metal_is_refused_with_what_is_missing(missing):
-    stated = {name: value for name, value in SILVER.items() if name != missing}
+    stated = {name: value for name, value in ZINC.items() if name != missing}
     with pytest.raises(Refusal) as refused:
-        properties_of_target(campaign(Target("silver", properties=stated)))
+        properties_of_target(campaign(Target("zinc", properties=stated), priors=PRIORS_OF_METAL))
     assert str(refused.value.place) == "campaign.toml!target.material"
     assert f"target.{missing}" in refused.value.remedy
     assert not any(f"target.{name}" in refused.value.remedy for name in stated)
+    assert "priors." not in refused.value.remedy
+
+
+@pytest.mark.parametrize("missing", PRIORS_OF_METAL)
+def test_an_unknown_metal_is_refused_with_the_prior_that_is_missing(missing):
+    stated = tuple(name for name in PRIORS_OF_METAL if name != missing)
+    with pytest.raises(Refusal) as refused:
+        properties_of_target(campaign(Target("zinc", properties=ZINC), priors=stated))
+    assert refused.value.remedy.endswith(f"tate priors.{missing}.")
+
+
+def test_one_refusal_names_every_missing_property_and_prior_of_an_unknown_metal():
+    with pytest.raises(Refusal) as refused:
+        properties_of_target(campaign(Target("unobtainium")))
+    for name in PROPERTY_NAMES["target"]:
+        assert f"target.{name}" in refused.value.remedy
+    for name in PRIORS_OF_METAL:
+        assert f"priors.{name}" in refused.value.remedy
+    assert set(PRIORS_OF_METAL) <= set(INPUTS)
 
 
 def test_a_misspelt_metal_is_met_with_the_nearest_known():
@@ -150,7 +185,7 @@ def test_a_misspelt_metal_is_met_with_the_nearest_known():
 
 def test_an_unknown_liquid_is_refused_with_what_is_missing():
     with pytest.raises(Refusal) as refused:
-        properties_of_liquid(campaign(liquid=Liquid("ethanol", properties={"density": q(789.0, "kg/m3")})))
+        properties_of_liquid(campaign(liquid=Liquid("toluene", properties={"density": q(867.0, "kg/m3")})))
     assert str(refused.value.place) == "campaign.toml!liquid.material"
     for name in PROPERTY_NAMES["liquid"]:
         assert (f"liquid.{name}" in refused.value.remedy) == (name != "density")
@@ -160,6 +195,11 @@ def test_an_unknown_liquid_is_refused_with_what_is_missing():
     ("made", "place", "word"),
     [
         (campaign(celsius=60.0), "campaign.toml!campaign.liquid_temperature", "5 degC to 50 degC"),
+        (
+            campaign(celsius=60.0, liquid=Liquid("acetone")),
+            "campaign.toml!campaign.liquid_temperature",
+            "density of acetone",
+        ),
         (campaign(nm=355.0), "campaign.toml!beam.wavelength", "liquid.refractive_index"),
         (
             campaign(liquid=Liquid("water", properties={"density": q(-1.0)})),
@@ -209,3 +249,51 @@ def test_optical_constants_reach_both_ends_of_their_range():
         (0.27 + 0.08 * 12 / 128, 7.15 + 0.995 * 12 / 128), abs=0, rel=1e-9
     )
     assert optical_constants("gold", 1088e-9) == pytest.approx((0.27, 7.15), abs=0, rel=1e-12)
+
+
+def test_gold_has_its_own_priors_of_the_hot_melt():
+    assert default_prior_texts("gold") == {
+        "removal_energy_density": "lognormal(6e9 J/m3, 40 %)",
+        "melt_surface_tension": "fixed(0.5 N/m)",
+        "melt_viscosity": "fixed(3 mPa s)",
+    }
+    assert {name: INPUTS[name].default for name in default_prior_texts("gold")} == default_prior_texts("gold")
+
+
+def test_golds_prior_of_the_removal_energy_is_where_the_handbook_numbers_put_it():
+    # exp(0.4) is the 40 % of the lognormal
+    assert 6e9 / math.exp(0.4) < landmark_energy("gold") < 6e9 * math.exp(0.4)
+
+
+@pytest.mark.parametrize("material", known_materials())
+def test_every_known_metal_has_priors_of_its_melt_within_their_landmarks(material):
+    priors = {name: parse_prior(name, text) for name, text in default_prior_texts(material).items()}
+    molten, hot = melting_energies(material)
+    removal = priors["removal_energy_density"]
+    assert removal.family == "lognormal"
+    assert molten < removal.a < hot
+    melting = {row.name: row.value for row in property_rows("melting") if row.material == material}
+    for name in ("surface_tension", "viscosity"):
+        hotter = priors[f"melt_{name}"]
+        assert hotter.family == "fixed"
+        assert 0.35 * melting[name] < hotter.a < 0.65 * melting[name]  # lower than at melting, above zero
+
+
+def test_an_unknown_metal_has_no_default_prior():
+    assert default_prior_texts("unobtainium") == {}
+
+
+@pytest.mark.parametrize("nm", [500.0, 515.0, 532.0, 800.0, 1030.0, 1064.0, 1100.0])
+@pytest.mark.parametrize("material", known_materials())
+def test_every_known_metal_has_optical_constants_at_the_wavelengths_of_lasers(material, nm):
+    n, k = optical_constants(material, nm * 1e-9)
+    assert 0.02 < n < 4.0
+    assert 1.5 < k < 11.0
+
+
+@pytest.mark.parametrize("celsius", [5.0, 10.0, 20.0, 33.0, 40.0, 50.0])
+@pytest.mark.parametrize("material", known_liquids())
+@pytest.mark.parametrize("metal", known_materials())
+def test_every_known_pair_can_be_used_from_5_to_50_degrees(metal, material, celsius):
+    made = campaign(Target(metal), Liquid(material), celsius=celsius)
+    assert properties_of_target(made).melt_density > properties_of_liquid(made).contact_density > 0.0

@@ -1,6 +1,6 @@
 """What the package knows of metals and liquids, and what a manifest states in its place. SI.
 
-The numbers stand in `materials.toml`, one row for each material and property, with its source.
+The numbers stand in `materials.toml` and `melting.toml`, one row for each material and property, with its source.
 """
 
 from __future__ import annotations
@@ -18,6 +18,7 @@ from reconcile.campaign.campaign import Campaign, Quantity
 from reconcile.campaign.refusal import Place, Refusal, nearest
 
 Table = Literal["target", "liquid"]
+Rows = Literal["target", "liquid", "melting"]
 
 # What a manifest may state under [target] and [liquid], with the SI unit of each.
 PROPERTY_NAMES: Mapping[Table, Mapping[str, str]] = {
@@ -41,6 +42,24 @@ PROPERTY_NAMES: Mapping[Table, Mapping[str, str]] = {
         "refractive_index": "1",
     },
 }
+
+# Inputs that depend so much on the metal that an unknown one has no default prior.
+PRIORS_OF_METAL = (
+    "absorbed_fraction",
+    "heated_depth",
+    "removal_energy_density",
+    "melt_surface_tension",
+    "melt_viscosity",
+)
+
+_HOT = 0.9  # of the critical temperature: where a superheated melt falls apart by itself (phase explosion)
+_SHARE_TO_HOT = 1.0 / 3.0  # of the way, in the logarithm, from fully molten to there
+
+# Gold's own default priors, to which those of other metals are scaled.
+_GOLD_REMOVAL = 6e9  # [J/m³]
+_GOLD_TENSION, _GOLD_VISCOSITY = 0.5, 3e-3  # [N/m], [Pa s] of the hot melt: 0.43 and 0.6 of the values at melting
+_REMOVAL_SPREAD = {"gold": 40}  # [%] standard deviation of the logarithm
+_SCALED_SPREAD = 50  # [%] of any other metal: gold's 40 % and 30 % for the scaling
 
 
 @dataclass(frozen=True, slots=True)
@@ -72,7 +91,7 @@ class LiquidProperties:
 
 @dataclass(frozen=True, slots=True)
 class PropertyRow:
-    """One row of `materials.toml`."""
+    """One row of `materials.toml` or `melting.toml`."""
 
     material: str
     name: str
@@ -93,8 +112,8 @@ def known_liquids() -> tuple[str, ...]:
     return _known("liquid")
 
 
-def property_rows(table: Table) -> tuple[PropertyRow, ...]:
-    """Return everything that the package knows of targets or of liquids, each row with its source."""
+def property_rows(table: Rows) -> tuple[PropertyRow, ...]:
+    """Return everything that the package knows of targets, of liquids or of melting, each row with its source."""
     return tuple(_rows(table).values())
 
 
@@ -104,10 +123,15 @@ def properties_of_target(campaign: Campaign) -> MetalProperties:
     Raises
     ------
     Refusal
-        Where the package does not know the material and the manifest does not state all its properties, where a stated
-        one is not above zero, or where the melt would not be denser than the liquid that slows it.
+        Where the package does not know the material and the manifest does not state all its properties and the priors
+        `PRIORS_OF_METAL`, where a stated property is not above zero, or where the melt would not be denser than the
+        liquid that slows it.
 
     """
+    if campaign.target.material not in known_materials():
+        missing = [f"priors.{name}" for name in PRIORS_OF_METAL if name not in campaign.priors]
+        if missing:
+            _refuse_unknown("target", campaign.target.material, campaign.target.properties, missing)
     found = _collect("target", campaign.target.material, campaign.target.properties, campaign.liquid_temperature.value)
     melt, contact = found["melt_density"], _liquid_contact_density(campaign)
     if contact is not None and melt <= contact:
@@ -144,6 +168,70 @@ def properties_of_liquid(campaign: Campaign) -> LiquidProperties:
     return LiquidProperties(**found, refractive_index=refractive_index)
 
 
+def default_prior_texts(material: str) -> dict[str, str]:
+    """Return the default priors that depend on the metal, by input, as a manifest would write them.
+
+    Parameters
+    ----------
+    material : as the manifest names it; one that the package does not know has none.
+
+    Returns
+    -------
+    dict
+        `removal_energy_density`, `melt_surface_tension` and `melt_viscosity`.
+
+    Notes
+    -----
+    Gold has its own. Another metal's removal energy density is gold's times the ratio of their `landmark_energy`;
+    surface tension and viscosity are the same share of the value at melting as gold's (corresponding states).
+
+    """
+    if material not in known_materials():
+        return {}
+
+    def scaled(name: str) -> float:
+        return _melting(material, name) / _melting("gold", name)
+
+    removal = _GOLD_REMOVAL * landmark_energy(material) / landmark_energy("gold")
+    spread = _REMOVAL_SPREAD.get(material, _SCALED_SPREAD)
+    return {
+        "removal_energy_density": f"lognormal({_two_digits(removal)} J/m3, {spread} %)",
+        "melt_surface_tension": f"fixed({_GOLD_TENSION * scaled('surface_tension'):.2g} N/m)",
+        "melt_viscosity": f"fixed({1e3 * _GOLD_VISCOSITY * scaled('viscosity'):.2g} mPa s)",
+    }
+
+
+def landmark_energy(material: str) -> float:
+    """Return the energy density at which a known metal is expected to break up [J/m³ of cold solid].
+
+    Notes
+    -----
+    A third of the way, in the logarithm, from fully molten to 0.9 of the critical temperature: the hot melt is torn
+    apart under tension (spallation) well before it boils. Own choice; gold's default prior lies within 40 % of it.
+
+    """
+    molten, hot = melting_energies(material)
+    return molten * (hot / molten) ** _SHARE_TO_HOT
+
+
+def melting_energies(material: str) -> tuple[float, float]:
+    """Return the energy densities of a known metal fully molten and at 0.9 of the critical temperature.
+
+    Returns
+    -------
+    molten, hot : over the solid at 298.15 K [J/m³ of cold solid].
+
+    Notes
+    -----
+    Heat to the melting point plus latent heat; from there the liquid's heat capacity, taken as constant.
+
+    """
+    per_mole = _melting(material, "heat_to_melting") + _melting(material, "heat_of_fusion")
+    climb = _HOT * _melting(material, "critical_temperature") - _melting(material, "melting_temperature")
+    amount = _single(_rows("target")[material, "density"]) / _melting(material, "molar_mass")  # [mol/m³]
+    return amount * per_mole, amount * (per_mole + climb * _melting(material, "liquid_heat_capacity"))
+
+
 def optical_constants(material: str, wavelength: float) -> tuple[float, float]:
     """Return real and imaginary part of a cold metal's refractive index [1], linear between tabulated wavelengths.
 
@@ -176,12 +264,13 @@ def optical_constants(material: str, wavelength: float) -> tuple[float, float]:
 
 @cache
 def _tables() -> dict[str, list[dict[str, Any]]]:
-    text = resources.files("reconcile.campaign").joinpath("materials.toml").read_text(encoding="utf-8")
-    return tomllib.loads(text)
+    folder = resources.files("reconcile.campaign")
+    texts = (folder.joinpath(name).read_text(encoding="utf-8") for name in ("materials.toml", "melting.toml"))
+    return {name: entries for text in texts for name, entries in tomllib.loads(text).items()}
 
 
 @cache
-def _rows(table: Table) -> dict[tuple[str, str], PropertyRow]:
+def _rows(table: Rows) -> dict[tuple[str, str], PropertyRow]:
     rows = {}
     for entry in _tables()[table]:
         value = entry["value"]
@@ -207,6 +296,23 @@ def _known(table: Table) -> tuple[str, ...]:
     return tuple(dict.fromkeys(material for material, _ in _rows(table)))
 
 
+def _melting(material: str, name: str) -> float:
+    return _single(_rows("melting")[material, name])
+
+
+def _single(row: PropertyRow) -> float:
+    if isinstance(row.value, tuple):
+        message = f"{row.name} of {row.material} depends on temperature"
+        raise AssertionError(message)  # a mistake in the table, not in anybody's file
+    return row.value
+
+
+def _two_digits(value: float) -> str:
+    """Return 6e9 for 6 000 000 000."""
+    mantissa, exponent = f"{value:.1e}".split("e")
+    return f"{float(mantissa):g}e{int(exponent)}"
+
+
 def _tabled_properties(table: Table) -> list[str]:
     """Return the names of the properties that have rows; a liquid's index comes from its own formula."""
     return [name for name in PROPERTY_NAMES[table] if name != "refractive_index"]
@@ -224,16 +330,24 @@ def _collect(table: Table, material: str, stated: Mapping[str, Quantity], temper
     }
 
 
-def _refuse_unknown(table: Table, material: str, stated: Mapping[str, Quantity]) -> NoReturn:
+def _refuse_unknown(
+    table: Table, material: str, stated: Mapping[str, Quantity], priors: Sequence[str] = ()
+) -> NoReturn:
+    """Refuse a material, naming each missing property and, in `priors`, each missing prior."""
     known = _known(table)
-    missing = [name for name in PROPERTY_NAMES[table] if (material, name) not in _rows(table) and name not in stated]
+    missing = [
+        f"{table}.{name}"
+        for name in PROPERTY_NAMES[table]
+        if (material, name) not in _rows(table) and name not in stated
+    ]
     meant = nearest(material, known)
     raise Refusal(
         Place("campaign.toml", key=f"{table}.material"),
         found=repr(material),
-        expected=f"one that the package knows ({', '.join(known)}), or every property of it in the manifest",
+        expected=f"one that the package knows ({', '.join(known)}), or every property "
+        + ("of it in the manifest" if table == "liquid" else "of it and prior of its melt in the manifest"),
         remedy=(f'Did you mean "{meant}"? Otherwise state ' if meant else "State ")
-        + ", ".join(f"{table}.{name}" for name in missing)
+        + ", ".join([*missing, *priors])
         + ".",
     )
 
