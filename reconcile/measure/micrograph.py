@@ -59,7 +59,7 @@ def measure_micrograph(frame: Array, pixel_pitch: float) -> Particles:
             f"an array of shape {frame.shape}", "a grey picture of at least 32 by 32 pixels", "Check the file."
         )
     picture = flatten(np.asarray(frame, dtype=np.float64))
-    seeds = find_seeds(picture.dark)
+    seeds = find_seeds(picture)
     if seeds.row.size == 0:
         raise _no_particle("nothing but specks")
     rims = find_rims(picture, seeds)

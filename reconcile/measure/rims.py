@@ -182,11 +182,12 @@ def unblurred(radius: Array, blur: float) -> Array:
     if blur <= 0:
         return radius
     true = np.geomspace(0.5, 15, 120)  # in units of the blur
-    level = 0.5 * special.chndtr(true**2, 2, (CORE / np.sqrt(2) * true) ** 2)
     low, high = np.zeros_like(true), true + 3
     for _ in range(40):
         middle = 0.5 * (low + high)
-        above = special.chndtr(true**2, 2, middle**2) > level
+        # The particle's own darkness is the middle one of the samples along the rays, at half of the core's radius.
+        own = special.chndtr(true**2, 2, (0.5 * CORE * middle) ** 2)
+        above = special.chndtr(true**2, 2, middle**2) > 0.5 * own
         low, high = np.where(above, middle, low), np.where(above, high, middle)
     seen = 0.5 * (low + high)
     rising = np.flatnonzero(np.diff(seen) > 0)
