@@ -21,6 +21,8 @@ _GROUP = 4  # px of edge that one profile averages over: more than the blur corr
 _MOST_PROFILES = 180
 _UNDECIDED = 0.1  # of the radius: standard deviation of the centre's height above the target before the outline is seen
 _FLOOR = 0.004  # px: error of the radius that stays on discs without noise, from the interpolation between pixels
+_HIDDEN = 0.03  # of the blur
+_HIDING = 2.0  # px: blur that hides fringes of the common spacing of 5 to 8 px
 _LEAST_ARC = 50.0  # degrees; with less, a circle's radius hangs on noise
 
 
@@ -285,7 +287,12 @@ def _judged(
     # blurring moves a level line by curvature times half the variance, as diffusion does.
     shift = edges.width**2 / (2.0 * half_level)
     # The ripple's form is a guess: its shift counts in part as uncertainty.
-    u = np.sqrt(fit.covariance[2, 2] + edges.shape**2 + (0.1 * shift) ** 2 + (0.15 * by_fringes) ** 2 + _FLOOR**2)
+    # Fringes closer than the blur are not seen, and move the half level by their amplitude times their spacing. At the
+    # blur of a few pixels that hides them some 3 % of it is left open (judged from drawn fringes of 5 to 15 %).
+    hidden = _HIDDEN * edges.width * (1.0 - np.exp(-((edges.width / _HIDING) ** 2))) ** 2
+    u = np.sqrt(
+        fit.covariance[2, 2] + edges.shape**2 + (0.1 * shift) ** 2 + (0.15 * by_fringes) ** 2 + hidden**2 + _FLOOR**2
+    )
     return Arc(
         centre=origin + x * along + y * away,
         height=y,

@@ -14,7 +14,9 @@ from reconcile.measure.measured import Array, Unmeasurable
 
 NDArrayBool = NDArray[np.bool_]
 
-BLOCKS = 128  # along the shorter side, of the coarsest look
+BLOCKS = 128  # along the shorter side, of the first look; a noisy frame gets fewer
+FEWEST = 24
+_QUIET = 0.06  # of the frame's contrast: noise of a block that the search for edges bears
 STEEPEST = np.tan(np.radians(4.0))  # of the target's edge; tilts up to 3° are promised
 _ORDER = 2  # of the polynomial in columns and rows that describes the light
 
@@ -62,12 +64,14 @@ def look(frame: Array, background: Array | None = None) -> Scene:
     Unmeasurable
         There is no structure, or no dark band along the lower side.
     """
-    block = max(1, min(frame.shape) // BLOCKS)
+    block = max(2, min(frame.shape) // BLOCKS)
     if background is not None:
         frame = _divided(frame, background, block)
-    coarse = averaged(frame, block)
     noise = pixel_noise(frame)
-    spread = float(np.ptp(np.quantile(coarse, [0.02, 0.98])))
+    coarse, spread = _coarse(frame, block)
+    while noise / block > _QUIET * spread and 2 * block <= min(frame.shape) // FEWEST:
+        block *= 2
+        coarse, spread = _coarse(frame, block)
     if not spread > max(5.0 * noise / block, 0.02 * float(np.abs(coarse).max())):
         raise Unmeasurable(
             "a frame without structure",
@@ -88,6 +92,12 @@ def look(frame: Array, background: Array | None = None) -> Scene:
     flat = frame / _spread_out(light, frame.shape, block)
     lit = float(np.median(light[bright]))
     return Scene(flat, noise / lit, band, (intercept + 0.5) * block - 0.5, slope, block)
+
+
+def _coarse(frame: Array, block: int) -> tuple[Array, float]:
+    """Return the blocks' means, and how far apart the darkest and the brightest of them lie."""
+    coarse = averaged(frame, block)
+    return coarse, float(np.ptp(np.quantile(coarse, [0.02, 0.98])))
 
 
 def averaged(frame: Array, block: int) -> Array:
