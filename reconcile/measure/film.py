@@ -17,6 +17,7 @@ SEEN = 6.0  # noise of the smoothed picture
 LEAST_CONTRAST = 3.0  # noise of a pixel
 FAINT = 0.2  # of the usual darkness: what is fainter is no particle
 _BLOCK = 8  # px
+_QUADRATIC = 6  # terms of a surface of second order
 _MAD = 1.4826  # median absolute deviation of a normal distribution → standard deviation
 
 
@@ -71,27 +72,30 @@ def _nothing(found: str, expected: str) -> Unmeasurable:
 
 
 def _smooth_surface(frame: Array) -> Array:
-    """Return a curved surface through the brightest of each small block, blocks under particles left out step by step."""
+    """Return a curved surface through the bright part of small blocks, blocks under particles left out step by step."""
     rows, columns = (size // _BLOCK for size in frame.shape)
     blocks = frame[: rows * _BLOCK, : columns * _BLOCK].reshape(rows, _BLOCK, columns, _BLOCK)
     bright = np.percentile(blocks, 60, axis=(1, 3))
     y, x = np.meshgrid(np.linspace(-1, 1, rows), np.linspace(-1, 1, columns), indexing="ij")
-    design = _terms(y.ravel(), x.ravel())
-    values, used = bright.ravel(), np.ones(bright.size, dtype=bool)
+    design, values = _terms(y.ravel(), x.ravel()), bright.ravel()
+    used = (bright >= ndimage.percentile_filter(bright, 70, size=max(min(rows, columns) // 4, 3))).ravel()
     solution = np.zeros(design.shape[1])
-    for _ in range(12):
-        solution = np.asarray(np.linalg.lstsq(design[used], values[used], rcond=None)[0], dtype=float)
+    for step in range(14):
+        terms = design.shape[1] if step > 7 and np.count_nonzero(used) > 0.4 * used.size else _QUADRATIC
+        found = np.linalg.lstsq(design[used, :terms], values[used], rcond=None)[0]
+        solution = np.concatenate([found, np.zeros(design.shape[1] - terms)])
         away = values - design @ solution
         spread = _MAD * float(np.median(away[away > 0])) if (away > 0).any() else 0.0
-        used = away > -2 * spread - 1e-12
-        if np.count_nonzero(used) < 3 * design.shape[1]:
+        bounds = away > -2 * spread - 1e-12
+        if np.count_nonzero(bounds) < max(3 * design.shape[1], 0.1 * used.size):
             break
+        used = bounds
     y, x = np.meshgrid(np.linspace(-1, 1, frame.shape[0]), np.linspace(-1, 1, frame.shape[1]), indexing="ij")
     film = (_terms(y.ravel(), x.ravel()) @ solution).reshape(frame.shape)
-    floor = 0.05 * float(np.max(film))
-    if floor <= 0:
+    usual = float(np.median(values[used]))
+    if usual <= 0:
         raise _nothing("a picture without brightness", "dark particles on a bright film")
-    return np.asarray(np.maximum(film, floor))
+    return np.asarray(np.clip(film, 0.3 * usual, 3 * usual))  # no film is more uneven than that
 
 
 def _terms(y: Array, x: Array) -> Array:

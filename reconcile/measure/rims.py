@@ -6,6 +6,7 @@ rim; that is put right with the profile of a blurred disc.
 
 from __future__ import annotations
 
+import functools
 from dataclasses import dataclass
 
 import numpy as np
@@ -160,38 +161,55 @@ def _filled(crossing: Array, free: Mask, radius: Array) -> tuple[Array, Mask, Ar
 
 
 def blur_of(slope: Array, radius: Array) -> float:
-    """Return the standard deviation of the blur [px] that the rims of the larger particles show; 0 where none tells.
+    """Return the standard deviation of the blur [px] that the rims show, the larger ones where there are some; 0: none tells.
 
-    Across a straight rim blurred by a Gaussian σ brightness changes by erf(a/(√2 σ)) within ±a.
+    The blur with which a disc of the seen radius would have the seen slope across its rim.
     """
     usable = np.isfinite(slope) & (radius >= SHARPEST_FROM)
     if not usable.any():
-        usable = np.isfinite(slope)
+        usable = np.isfinite(slope) & (radius > 1)
     if not usable.any():
         return 0.0
-    share = float(np.clip(2 * _HALF_WAY * np.median(slope[usable]), 1e-3, 1 - 1e-6))
-    return float(_HALF_WAY / (np.sqrt(2) * special.erfinv(share)))
+    seen, steepness = radius[usable], slope[usable]
+    low, high = np.full(seen.size, 0.2), 0.7 * seen
+    for _ in range(30):
+        middle = 0.5 * (low + high)
+        true = unblurred(seen, middle) / middle
+        own = _blurred(true, 0.5 * CORE * seen / middle)
+        drop = _blurred(true, (seen - _HALF_WAY) / middle) - _blurred(true, (seen + _HALF_WAY) / middle)
+        steeper = drop / (2 * _HALF_WAY * own) > steepness
+        low, high = np.where(steeper, middle, low), np.where(steeper, high, middle)
+    return float(np.median(0.5 * (low + high)))
 
 
-def unblurred(radius: Array, blur: float) -> Array:
+def unblurred(radius: Array, blur: Array | float) -> Array:
     """Return the radii of discs whose half level, after a Gaussian blur, lies at `radius` [px].
 
     A disc of radius R blurred by σ has at distance r the darkness of a non-central χ² of two degrees, P(R²/σ²; r²/σ²);
     for R ≫ σ its half level lies at R − σ²/(2R).
     """
-    if blur <= 0:
-        return radius
-    true = np.geomspace(0.5, 15, 120)  # in units of the blur
+    width = np.maximum(blur, 1e-6)
+    true, seen = _half_levels()
+    scaled = radius / width
+    small = np.interp(scaled, seen, true)
+    return np.asarray(width * np.where(scaled < seen[-1], small, scaled + 0.5 / np.maximum(scaled, 1e-9)))
+
+
+def _blurred(true: Array, distance: Array) -> Array:
+    """Return the darkness of a blurred disc at a distance from its middle; both in units of the blur."""
+    return np.asarray(special.chndtr(true**2, 2, distance**2))
+
+
+@functools.cache
+def _half_levels() -> tuple[Array, Array]:
+    """Return radii of discs and where their half levels lie, in units of the blur."""
+    true = np.geomspace(0.5, 15, 160)
     low, high = np.zeros_like(true), true + 3
-    for _ in range(40):
+    for _ in range(45):
         middle = 0.5 * (low + high)
         # The particle's own darkness is the middle one of the samples along the rays, at half of the core's radius.
-        own = special.chndtr(true**2, 2, (0.5 * CORE * middle) ** 2)
-        above = special.chndtr(true**2, 2, middle**2) > 0.5 * own
+        above = _blurred(true, middle) > 0.5 * _blurred(true, 0.5 * CORE * middle)
         low, high = np.where(above, middle, low), np.where(above, high, middle)
     seen = 0.5 * (low + high)
-    rising = np.flatnonzero(np.diff(seen) > 0)
-    start = int(rising[0]) if rising.size else 0
-    scaled = radius / blur
-    small = np.interp(scaled, seen[start:], true[start:])
-    return np.asarray(blur * np.where(scaled < seen[-1], small, scaled + 0.5 / np.maximum(scaled, 1e-9)))
+    rising = int(np.argmax(np.diff(seen) > 1e-6))  # below, discs of any size look alike: nothing but blur is seen
+    return true[rising:], seen[rising:]
