@@ -178,6 +178,13 @@ def test_one_refusal_names_every_missing_property_and_prior_of_an_unknown_metal(
     assert set(PRIORS_OF_METAL) <= set(INPUTS)
 
 
+@pytest.mark.parametrize("other", ["zinc", "tin", "lead", "nickel"])
+def test_another_metal_is_not_taken_for_a_misspelt_one(other):
+    with pytest.raises(Refusal) as refused:
+        properties_of_target(campaign(Target(other)))
+    assert "Did you mean" not in refused.value.remedy
+
+
 def test_a_misspelt_metal_is_met_with_the_nearest_known():
     with pytest.raises(Refusal, match='Did you mean "gold"'):
         properties_of_target(campaign(Target("glod")))

@@ -10,12 +10,13 @@ import tomllib
 from bisect import bisect_right
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
+from difflib import get_close_matches
 from functools import cache
 from importlib import resources
 from typing import Any, Literal, NoReturn
 
 from reconcile.campaign.campaign import Campaign, Quantity
-from reconcile.campaign.refusal import Place, Refusal, nearest
+from reconcile.campaign.refusal import Place, Refusal
 
 Table = Literal["target", "liquid"]
 Rows = Literal["target", "liquid", "melting"]
@@ -60,6 +61,8 @@ _GOLD_REMOVAL = 6e9  # [J/m³]
 _GOLD_TENSION, _GOLD_VISCOSITY = 0.5, 3e-3  # [N/m], [Pa s] of the hot melt: 0.43 and 0.6 of the values at melting
 _REMOVAL_SPREAD = {"gold": 40}  # [%] standard deviation of the logarithm
 _SCALED_SPREAD = 50  # [%] of any other metal: gold's 40 % and 30 % for the scaling
+
+_ALIKE = 0.7  # names less alike are another material, not a slip of the pen: zinc is not iron
 
 
 @dataclass(frozen=True, slots=True)
@@ -340,7 +343,7 @@ def _refuse_unknown(
         for name in PROPERTY_NAMES[table]
         if (material, name) not in _rows(table) and name not in stated
     ]
-    meant = nearest(material, known)
+    meant = next(iter(get_close_matches(material, known, n=1, cutoff=_ALIKE)), None)
     raise Refusal(
         Place("campaign.toml", key=f"{table}.material"),
         found=repr(material),
