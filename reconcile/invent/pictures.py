@@ -94,7 +94,7 @@ def _seen(camera: Camera, scene: Scene, rng: np.random.Generator) -> Array:
         seen *= _bubble(x, y - row, scene.radius / camera.pitch, rng)
     if scene.shock_radius is not None:
         seen *= _ring(np.hypot(x, y - row) - scene.shock_radius / camera.pitch)
-    glare = 1 + 0.12 * np.sin(x / 40 + rng.uniform(0, 6)) * np.exp(-np.maximum(above, 0) / 3)
+    glare = 1 + 0.06 * np.sin(x / 40 + rng.uniform(0, 6)) * np.exp(-np.maximum(above, 0) / 3)
     behind = DARK * (0.8 + 0.4 * np.sin(x / 55 + rng.uniform(0, 6)) ** 2)
     return _blurred(np.where(above > 0, seen * glare, behind), rng)
 
