@@ -158,6 +158,9 @@ def test_bad_files_are_refused_by_name_and_nothing_else_is(gathered):
         }
         assert {name for name in refused if name.split("/")[0] in {"frames", "maps", "tem"}} <= bad
         assert {file.name for file in planned.frames if file.fault} <= refused
-        assert {file.name for file in planned.traces if file.fault == "clipped"} <= refused
+        clipped = {file.name for file in planned.traces if file.fault == "clipped"}
+        noted = {note.source for note in got.notes if "clip" in note.note} | refused
+        assert clipped <= noted
+        assert not any(r.kind == "pressure-integral" and r.place.file in clipped for r in got.readings)
         sounds = {file.name for file in planned.traces}
         assert len((refused & sounds) - bad) <= 2
