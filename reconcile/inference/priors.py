@@ -8,16 +8,16 @@ from dataclasses import dataclass
 from reconcile.campaign.campaign import Campaign, Prior, Quantity
 from reconcile.campaign.inputs import INPUTS, Input, describe
 from reconcile.campaign.kinds import KINDS
-from reconcile.campaign.materials import optical_constants, properties_of_liquid
+from reconcile.campaign.materials import default_prior_texts, optical_constants, properties_of_liquid
 from reconcile.campaign.prior_text import parse_prior
 from reconcile.inference.density import Density
 from reconcile.physics.beam import fresnel_absorptance
 
-# Hot and rough metal absorbs more than cold polished metal: by about 3.5 in the infrared, where cold gold reflects
-# nearly all, and by little in the green. Own judgement over calorimetry with femtosecond pulses.
-_GREEN, _INFRARED = 515e-9, 800e-9  # [m]
-_HOT_FACTOR = (1.0, 3.5)
-_HOT_SPREAD = (0.2, 0.6)  # standard deviation of the logarithm
+# Hot and rough metal absorbs more than cold polished metal: several times as much where that reflects nearly all, hardly
+# more where it absorbs half. Own judgement over calorimetry with femtosecond pulses; linear in ln(cold) in between.
+_COLD = (0.04, 0.45)  # share absorbed by cold, smooth metal under the liquid
+_HOT_FACTOR = (3.5, 1.0)
+_HOT_SPREAD = (0.6, 0.2)  # standard deviation of the logarithm
 
 _RESPONSE_SPREAD = 0.15  # of a bandwidth stated without ±
 _JITTER_SPREAD = 0.5  # of the logarithm of energy_jitter about the manifest's shot_jitter
@@ -110,7 +110,8 @@ def _default(entry: Input, campaign: Campaign) -> Prior:
         return _absorbed_fraction(campaign)
     if entry.name == "probe_angle":
         return Prior("fixed", 0.0, 0.0, "fixed(0 deg)")
-    text = KINDS[member].scatter if family == "scatter" else entry.default
+    of_material = default_prior_texts(campaign.target.material).get(entry.name)
+    text = KINDS[member].scatter if family == "scatter" else of_material or entry.default
     if text is None:
         message = f"{entry.name} has neither a default prior nor an instrument"
         raise AssertionError(message)  # a mistake in the table of inputs, not in anybody's file
@@ -119,10 +120,10 @@ def _default(entry: Input, campaign: Campaign) -> Prior:
 
 def _absorbed_fraction(campaign: Campaign) -> Prior:
     """Cold metal's absorptance into the liquid by Fresnel's relation, raised and widened for hot and rough metal."""
-    wavelength = campaign.beam.wavelength.value
-    n, k = optical_constants(campaign.target.material, wavelength)
+    n, k = optical_constants(campaign.target.material, campaign.beam.wavelength.value)
     cold = float(fresnel_absorptance(n, k, properties_of_liquid(campaign).refractive_index))
-    share = min(max((wavelength - _GREEN) / (_INFRARED - _GREEN), 0.0), 1.0)
+    share = math.log(cold / _COLD[0]) / math.log(_COLD[1] / _COLD[0])
+    share = min(max(share, 0.0), 1.0)
     factor = _HOT_FACTOR[0] + share * (_HOT_FACTOR[1] - _HOT_FACTOR[0])
     spread = _HOT_SPREAD[0] + share * (_HOT_SPREAD[1] - _HOT_SPREAD[0])
     median = cold * factor
