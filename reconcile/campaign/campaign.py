@@ -105,7 +105,8 @@ class Table:
     only: Mapping[str, str] = field(default_factory=dict)
     columns: Mapping[str, str] = field(default_factory=dict)
     units: Mapping[str, str] = field(default_factory=dict)
-    uncertainty: Quantity | None = None  # for all rows, or blank cells of an uncertainty column; unit "%" is a share of the value
+    # for all rows, or blank cells of an uncertainty column; unit "%" is a share of the value
+    uncertainty: Quantity | None = None
     detection_limit: Quantity | None = None
     not_detected: tuple[str, ...] = ()
     scale: Quantity | None = None  # None: exactly 1

@@ -82,4 +82,5 @@ class Gathered:
     decisions: tuple[Decision, ...] = ()
     files: tuple[FileRead, ...] = ()
     unasked: tuple[str, ...] = ()  # files in the folder that no table asked for
-    overlays: dict[str, Path] = field(default_factory=dict)  # drawings by the source of their readings, in the folder handed in
+    # drawings by the source of their readings, in the folder handed in
+    overlays: dict[str, Path] = field(default_factory=dict)
