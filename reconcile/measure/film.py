@@ -111,9 +111,10 @@ def _local_mean(values: Array, used: Mask, width: float) -> Array:
 def _level(darkness: Array) -> float:
     """Return the usual darkness of what is dark, without knowing the noise well yet."""
     smooth = ndimage.gaussian_filter(darkness, SMOOTH)
-    centre = float(np.median(smooth))
-    below = smooth[smooth < centre]
-    noise = _MAD * float(np.median(centre - below)) if below.size else 0.0
+    low, high = np.percentile(smooth, [0.5, 99.5])
+    film = smooth[smooth <= 0.5 * (low + high)]  # on the bright side of half-way, however much is covered
+    centre = float(np.median(film))
+    noise = _MAD * float(np.median(centre - film[film <= centre]))
     return _threshold(smooth, noise)[1]
 
 

@@ -21,6 +21,7 @@ LEAST_DIAMETER = 5.0  # px: some twenty pixels (common practice); smaller ones a
 LEAST_SEEN = 0.3  # of a rim
 ROUGHEST = 0.12  # relative scatter of a rim about an ellipse
 UNEXPLAINED = 0.12  # of a cluster's area outside all rims found in it
+NESTED = 0.8  # of the larger one's radius
 SMALL_SHARE = 0.02  # of the particles; more small ones than this are told
 
 
@@ -63,6 +64,10 @@ def measure_micrograph(frame: Array, pixel_pitch: float) -> Particles:
     if seeds.row.size == 0:
         raise _no_particle("nothing but specks")
     rims = find_rims(picture, seeds)
+    nested = _nested(rims, seeds)
+    if nested.any():
+        seeds = seeds.without(nested)
+        rims = find_rims(picture, seeds)
     radius = unblurred(rims.radius, blur_of(rims.slope, rims.radius))
     whole = _whole(rims, frame.shape)
     cluster = _unsplit(picture, seeds, rims)
@@ -116,6 +121,18 @@ def _weights(rims: Rims, shape: tuple[int, ...]) -> Array:
     free_rows = np.maximum(rows - (bottom - top), 1)
     free_columns = np.maximum(columns - (right - left), 1)
     return np.asarray(rows * columns / (free_rows * free_columns))
+
+
+def _nested(rims: Rims, seeds: Seeds) -> Mask:
+    """Return which seeds have their middle well inside a larger rim of the same dark part: one particle seen twice."""
+    nested = np.zeros(seeds.row.size, dtype=bool)
+    radius = rims.radius
+    for index in np.argsort(radius, kind="stable"):
+        others = (seeds.group == seeds.group[index]) & ~nested & (radius >= radius[index])
+        others[index] = False
+        distance = np.hypot(rims.row[others] - rims.row[index], rims.column[others] - rims.column[index])
+        nested[index] = bool(np.any(distance < NESTED * radius[others]))
+    return nested
 
 
 def _unsplit(picture: Flattened, seeds: Seeds, rims: Rims) -> Mask:

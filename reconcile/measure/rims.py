@@ -20,6 +20,7 @@ RAYS = 72
 STEPS = 64  # along a ray
 CLEAR = 0.93  # of the way to where a neighbour begins
 CLEAR_PIXELS = 1.0
+EASE = 2.0  # px: a particle's own half level may lie that far inside the common one
 CORE = 0.6  # of the radius: where a particle's own darkness is taken
 SHARPEST_FROM = 6.0  # px; radius from which a rim tells the blur
 _HALF_WAY = 0.75  # px on both sides of the rim, over which its slope is taken
@@ -56,18 +57,19 @@ def find_rims(picture: Flattened, seeds: Seeds) -> Rims:
     """Return the rims of all particles: from the seeds first, then from the centres and radii so found."""
     spline = ndimage.spline_filter(picture.smooth, order=3)
     row, column, radius = seeds.row, seeds.column, np.maximum(seeds.radius, 1.0)
-    rims = _seen(spline, row, column, radius)
+    rims = _seen(spline, picture.dark, (row, column, radius))
     for _ in range(2):
         orders = np.exp(1j * _angles())
         shift = 2 * np.mean(rims.rim * orders, axis=1)  # the first harmonic of the rim is a shift of its centre
         length = np.maximum(np.abs(shift) / (0.5 * rims.radius + 1e-9), 1)
         row, column = rims.row + shift.imag / length, rims.column + shift.real / length
         radius = np.clip(rims.radius, 0.6 * seeds.radius, 1.8 * seeds.radius + 2)
-        rims = _seen(spline, row, column, np.maximum(radius, 1.0))
+        rims = _seen(spline, picture.dark, (row, column, np.maximum(radius, 1.0)))
     return rims
 
 
-def _seen(spline: Array, row: Array, column: Array, radius: Array) -> Rims:
+def _seen(spline: Array, dark: Mask, circles: tuple[Array, Array, Array]) -> Rims:
+    row, column, radius = circles
     angle = _angles()
     reach = np.linspace(0, 1, STEPS)[None, :] * (1.6 * radius + 4)[:, None]  # (n, STEPS)
     rows = row[:, None, None] + reach[:, None, :] * np.sin(angle)[None, :, None]
@@ -76,7 +78,8 @@ def _seen(spline: Array, row: Array, column: Array, radius: Array) -> Rims:
     core = np.where((reach <= CORE * radius[:, None])[:, None, :], rays, np.nan)
     core[:, :, 0] = rays[:, :, 0]
     own = np.nanmedian(core.reshape(row.size, -1), axis=1)
-    crossing, crossed = _crossings(rays, reach, 0.5 * own, radius)
+    within = ndimage.map_coordinates(dark.astype(np.uint8), [rows, columns], order=0, mode="constant")
+    crossing, crossed = _crossings(rays, reach, 0.5 * own, within > 0)
     inside = (
         (row[:, None] + crossing * np.sin(angle) > 0.5)
         & (row[:, None] + crossing * np.sin(angle) < spline.shape[0] - 1.5)
@@ -94,17 +97,23 @@ def _seen(spline: Array, row: Array, column: Array, radius: Array) -> Rims:
     return Rims(row, column, rim, free, rough, slope)
 
 
-def _crossings(rays: Array, reach: Array, level: Array, radius: Array) -> tuple[Array, Mask]:
-    """Return where each ray first falls below its particle's level, beyond its core: (n, RAYS), and whether it does."""
+def _crossings(rays: Array, reach: Array, level: Array, within: Mask) -> tuple[Array, Mask]:
+    """Return where each ray falls below its particle's level as it leaves the dark: (n, RAYS), and whether it does.
+
+    `within` tells where it is inside the dark, light spots of a particle included: they are passed over.
+    """
+    leaves = np.argmin(within, axis=2)  # 0 where it never leaves
+    leaves = np.where(within.all(axis=2), STEPS, leaves)
+    step = reach[:, 1][:, None]
     below = rays < level[:, None, None]
-    below &= (reach > 0.4 * radius[:, None])[:, None, :]
+    below &= np.arange(STEPS) >= (leaves - EASE / step)[..., None]
+    below[..., 0] = False
     first = np.argmax(below, axis=2)
     crossed = first > 0
     at = np.maximum(first, 1)[..., None]
     high = np.take_along_axis(rays, at - 1, axis=2)[..., 0]
     low = np.take_along_axis(rays, at, axis=2)[..., 0]
     share = np.clip((high - level[:, None]) / np.where(high > low, high - low, 1.0), 0, 1)
-    step = reach[:, 1][:, None]
     return np.where(crossed, (at[..., 0] - 1 + share) * step, reach[:, -1][:, None]), crossed
 
 

@@ -8,7 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy import ndimage
 
-from reconcile.measure.film import Flattened
+from reconcile.measure.film import Flattened, Mask
 from reconcile.measure.measured import Array
 
 SHALLOWEST = 0.1  # of a seed's own depth: a neck less deep than this below it parts no two particles
@@ -16,6 +16,8 @@ LEAST_DENT = 0.5  # px
 LEAST_DEPTH = 1.0  # px
 DEEPER = 0.65  # of a particle's darkness: where the distance from the film is taken
 FINER = 2
+CORE_FROM = 3.0  # px from the film: where the blur of the rim has ended
+SPOTTED = 0.02  # of a core lighter than that level: a spotted particle
 _ALONG = 24  # places looked at between two seeds
 
 
@@ -28,6 +30,11 @@ class Seeds:
     radius: Array  # (n,)
     group: NDArray[np.integer]  # (n,) which connected dark part it lies in, from 1
     labels: NDArray[np.integer]  # (rows, columns) those parts
+
+    def without(self, dropped: Mask) -> Seeds:
+        """Return the others."""
+        kept = ~dropped
+        return Seeds(self.row[kept], self.column[kept], self.radius[kept], self.group[kept], self.labels)
 
 
 def find_seeds(picture: Flattened) -> Seeds:
@@ -45,9 +52,14 @@ def find_seeds(picture: Flattened) -> Seeds:
     index = np.arange(1, number + 1)
     own = np.concatenate([[np.inf], np.atleast_1d(ndimage.maximum(picture.smooth, labels, index))])
     level = DEEPER * np.minimum(own, picture.usual)
+    # Light spots inside a particle (twins, Bragg contrast) are no dents of its outline: there half of the level must do.
+    core = ndimage.distance_transform_edt(np.pad(picture.dark, 1))[1:-1, 1:-1] > CORE_FROM
+    light = np.bincount(labels[core & (picture.smooth < level[labels])], minlength=number + 1)
+    level[light > SPOTTED * np.bincount(labels[core], minlength=number + 1)] *= 0
     fine_labels = np.kron(labels, np.ones((FINER, FINER), dtype=labels.dtype))
     fine = ndimage.zoom(picture.smooth, FINER, order=1, grid_mode=True, mode="nearest")
-    inside = np.pad(ndimage.binary_fill_holes(fine > level[fine_labels]), 1)  # particles cut by the border end there
+    inside = (fine > level[fine_labels]) & (fine_labels > 0)
+    inside = np.pad(ndimage.binary_fill_holes(inside), 1)  # particles cut by the border end there
     depth = np.asarray(ndimage.distance_transform_edt(inside))[1:-1, 1:-1] / FINER
     peaks = (depth == ndimage.maximum_filter(depth, size=3)) & (depth >= LEAST_DEPTH)
     rows, columns = np.nonzero(peaks)
