@@ -13,7 +13,7 @@ SEED = 4  # of the example campaign
 
 
 def write_example(folder: Path) -> None:
-    """Write the example campaign: 72 shots of an invented laboratory, with all its untidiness.
+    """Write the example campaign: 72 shots of an invented laboratory, its tables, pictures and traces, untidy as they are.
 
     Parameters
     ----------
@@ -23,4 +23,4 @@ def write_example(folder: Path) -> None:
     ------
     Refusal : the folder exists and holds something.
     """
-    invent(SEED).write(folder, style="untidy")
+    invent(SEED).write(folder, style="files")

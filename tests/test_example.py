@@ -5,12 +5,15 @@ from __future__ import annotations
 import csv
 import math
 import tomllib
+import wave
 from collections import Counter
 from pathlib import Path
 
+import h5py
 import numpy as np
 import openpyxl
 import pytest
+from PIL import Image
 
 from reconcile.campaign.inputs import FAMILIES, INPUTS, describe
 from reconcile.campaign.kinds import KINDS
@@ -28,7 +31,7 @@ def campaigns():
 
 
 @pytest.fixture(scope="module")
-def untidy(tmp_path_factory):
+def example(tmp_path_factory):
     folder = tmp_path_factory.mktemp("example") / "campaign"
     write_example(folder)
     return folder
@@ -265,19 +268,51 @@ def cells(path):
     return {(sheet.title, cell.coordinate): cell.value for sheet in book for row in sheet for cell in row}
 
 
-def test_the_committed_example_is_what_the_verb_writes(untidy):
-    # workbooks by their cells: compression differs between systems
-    names = {path.relative_to(untidy).as_posix() for path in untidy.rglob("*") if path.is_file()}
+def numbers(path):
+    """Return what a rendered file holds, in whole steps of its camera or recorder (maps: in picometres)."""
+    if path.suffix in {".png", ".tif"}:
+        with Image.open(path) as image:
+            steps = np.asarray(image, dtype=float)
+        return np.nan_to_num(1e6 * steps, nan=-1.0) if path.parent.name == "maps" else steps
+    if path.suffix == ".wav":
+        with wave.open(str(path), "rb") as file:
+            return np.frombuffer(file.readframes(file.getnframes()), "<i2") / 16.0
+    if path.suffix == ".csv":
+        values = np.loadtxt(path, delimiter=",", skiprows=6)[:, 1]
+    elif path.suffix == ".h5":
+        with h5py.File(path) as file:
+            values = file["probe (V)"][:]
+    else:
+        with np.load(path) as file:
+            values = file["probe (V)"]
+    return values / np.min(np.diff(np.unique(np.round(values, 9))))
+
+
+def test_the_committed_example_is_what_the_verb_writes(example):
+    # workbooks by their cells, pictures and traces by what they hold: compression differs between systems, and the
+    # last bit of a calculation with it, so that one value in a thousand may be rounded the other way
+    names = {path.relative_to(example).as_posix() for path in example.rglob("*") if path.is_file()}
     assert names == {path.relative_to(COMMITTED).as_posix() for path in COMMITTED.rglob("*") if path.is_file()}
-    for name in names:
+    with (COMMITTED / "truth" / "truth_files.csv").open(encoding="utf-8", newline="") as file:
+        broken = {row["file"] for row in csv.DictReader(file) if row["fault"] == "truncated"}
+    for name in sorted(names - broken):
         if name.endswith(".xlsx"):
-            assert cells(untidy / name) == cells(COMMITTED / name), name
+            assert cells(example / name) == cells(COMMITTED / name), name
+        elif name.split("/")[0] in {"frames", "traces", "maps", "tem"}:
+            made, kept = numbers(example / name), numbers(COMMITTED / name)
+            assert made.shape == kept.shape, name
+            assert np.abs(made - kept).max() < 1.5 and np.mean(np.abs(made - kept) > 0.5) < 1e-3, name
         else:
-            assert (untidy / name).read_bytes() == (COMMITTED / name).read_bytes(), name
+            assert (example / name).read_bytes() == (COMMITTED / name).read_bytes(), name
+    assert len(broken) == 1
 
 
-def test_the_example_is_written_the_same_byte_for_byte(untidy, tmp_path):
+def test_the_example_stays_small_enough_to_be_kept():
+    assert sum(path.stat().st_size for path in COMMITTED.rglob("*") if path.is_file()) < 12 * 2**20
+
+
+def test_the_example_is_written_the_same_byte_for_byte(example, tmp_path):
     write_example(tmp_path / "again")
-    for path in untidy.rglob("*"):
+    for path in example.rglob("*"):
         if path.is_file():
-            assert path.read_bytes() == (tmp_path / "again" / path.relative_to(untidy)).read_bytes(), path.name
+            assert path.read_bytes() == (tmp_path / "again" / path.relative_to(example)).read_bytes(), path.name
