@@ -14,7 +14,7 @@ from numpy.typing import NDArray
 from scipy import ndimage
 
 from reconcile.measure.crater_edge import BIN, Edge, find_edge, ring_means
-from reconcile.measure.levelling import LEAST_SURROUND, MAD, Array, Levelled, Mask, level, smoothed
+from reconcile.measure.levelling import LEAST_SURROUND, MAD, Array, Levelled, Mask, level, smoothed, without_spikes
 from reconcile.measure.measured import Finding, Measured, Outline, Stroke, Unmeasurable
 
 LIMIT = 3.0  # noise
@@ -98,7 +98,8 @@ def measure_map(height: Array, pixel_pitch: float) -> Finding:
         The crater runs out of the map, too little of its surround is there, or the map is flat without noise.
     """
     _check(height)
-    rough = level(height)
+    clean = without_spikes(height)
+    rough = level(clean)
     if rough is None:
         raise _no_surround()
     found = _region(rough)
@@ -108,7 +109,7 @@ def measure_map(height: Array, pixel_pitch: float) -> Finding:
     distance = shape.distance(height.shape)
     edge = _edge(rough, shape, distance)
     excluded, rim_left = _excluded(rough, distance, edge.at, shape.area_radius)
-    settled = level(height, excluded) or rough
+    settled = level(clean, excluded) or rough
     shape = _outline(settled, found)
     distance = shape.distance(height.shape)
     edge = _edge(settled, shape, distance)

@@ -19,6 +19,7 @@ MAD = 1.4826  # median absolute deviation of a normal distribution → standard 
 SPIKE = 8.0  # noise, beyond what the points around differ by
 OUTLYING = 4.0  # smoothed noise: a crater, its rim or dirt
 STRIPED = 3.0  # variance of the rows' levels over what noise alone gives: then they are stripes
+SETTLED = 0.002  # share of the map that may still change sides
 LEAST_SURROUND = 0.15  # share of the map
 _PASSES = 6
 _LAGS = 4  # points within which the correlation of the noise is summed
@@ -75,7 +76,7 @@ def level(height: Array, excluded: Mask | None = None) -> Levelled | None:
     Parameters
     ----------
     height : Array
-        (rows, columns) [m], NaN for missing points.
+        (rows, columns) [m], NaN for missing points and spikes.
     excluded : Mask
         (rows, columns) The crater with its rim, where it is known; None: found, as what stands out of the surround.
 
@@ -83,9 +84,8 @@ def level(height: Array, excluded: Mask | None = None) -> Levelled | None:
     -------
     Levelled, or None where too little of a surround is left.
     """
-    despiked = without_spikes(height)
-    known = np.isfinite(despiked)
-    residual = despiked - _first_tilt(despiked)
+    known = np.isfinite(height)
+    residual = height - _first_tilt(height)
     if excluded is None:
         surround, passes = known & ~standing_out(residual, known), _PASSES
     else:
@@ -95,28 +95,23 @@ def level(height: Array, excluded: Mask | None = None) -> Levelled | None:
     for step in range(passes):
         if np.count_nonzero(surround) < _FEWEST:
             return None
-        target = despiked - lines.offsets()
-        together = 1.0 if step < passes - 1 else _together(residual, surround)
+        target = height - lines.offsets()
+        together = 1.0 if step < 1 else _together(residual, surround)
         order, parameters, covariance, noise = _form(target, surround, together)
-        formless = despiked - np.tensordot(parameters, _terms(height.shape, order), axes=1)
+        formless = height - np.tensordot(parameters, _terms(height.shape, order), axes=1)
         lines = _Lines.of(formless, surround)
         residual = formless - lines.offsets()
         noise = _deviation(residual[surround])
         within = np.abs(residual) <= max(5 * noise, 1e-12 * float(np.nanmax(np.abs(residual))) + 1e-300)
         flat = (known & ~standing_out(residual, surround) if excluded is None else surround) & within
         # A surround that keeps shrinking has lost its form, not found a larger crater.
-        surround = flat if np.count_nonzero(flat) > LEAST_SURROUND * flat.size else surround & within
+        before, surround = surround, flat if np.count_nonzero(flat) > LEAST_SURROUND * flat.size else surround & within
+        if step and np.count_nonzero(before != surround) < SETTLED * flat.size:
+            break
     residual = residual - float(np.mean(residual[surround]))
-    return Levelled(
-        residual,
-        surround,
-        float(np.std(residual[surround])),
-        _together(residual, surround),
-        order,
-        lines.names(),
-        covariance * _together(residual, surround) / together,
-        lines.u,
-    )
+    noise, settled = float(np.std(residual[surround])), _together(residual, surround)
+    covariance = covariance * settled / together
+    return Levelled(residual, surround, noise, settled, order, lines.names(), covariance, lines.u)
 
 
 def without_spikes(height: Array) -> Array:
