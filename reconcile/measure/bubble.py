@@ -20,6 +20,7 @@ Side = Literal["bottom", "top", "left", "right"]
 
 _DEPTH = 0.35  # of the target's own darkness: what is darker than this is a bubble, with noise below a tenth of it
 _FAINT = 0.08
+_RAGGED = 0.12  # of the radius: scatter of a bubble's outline as blocks show it
 _BLURRED = 0.3  # of the radius: an outline broader than this is no outline
 _AGREEMENT = 0.02  # of the radius: how well outline and area agree on a clean frame
 
@@ -129,9 +130,11 @@ def _found(scene: Scene) -> Cap | None:
     block = scene.block
     while True:
         depth = max(_DEPTH * (1.0 - scene.band), 4.5 * scene.noise / block)
-        cap = standing(scene, block, depth) if depth < 0.9 * (1.0 - scene.band) else None
-        if cap is not None and cap.radius > 2.0 * block:
-            return cap
+        caps = standing(scene, block, depth)[0] if depth < 0.9 * (1.0 - scene.band) else []
+        caps = [cap for cap in caps if cap.radius > 2.0 * block]
+        round_ones = [cap for cap in caps if cap.ragged < max(_RAGGED * cap.radius, 0.7 * block)]
+        if caps:
+            return (round_ones or caps)[0]
         if block < 4:
             return None
         block //= 2
@@ -169,11 +172,11 @@ def _empty(contact: Contact, pitch: float, side: Side, shape: tuple[int, ...]) -
         )
     limit = max(5.0 * block, 8.0, 4.0 * contact.width)
     depth = max(_FAINT * (1.0 - scene.band), 5.0 * scene.noise / scene.block)
-    faint = standing(scene, scene.block, depth, 2.5 * contact.width)
-    if faint is not None and faint.radius > max(limit, 3.0 * scene.block):
+    area = standing(scene, scene.block, depth, 2.5 * contact.width)[1]
+    if area > 0.5 * np.pi * max(limit, 3.0 * scene.block) ** 2:
         raise Unmeasurable(
-            "something faint on the target, too bright for a bubble and too dark for light",
-            "a dark bubble, or none",
+            "something on the target that is no clear bubble: faint, or without a circular outline",
+            "a dark bubble, or nothing",
             "Look at the frame.",
         )
     outline = Outline((_edge_stroke(scene, side, shape),), f"no bubble; below {limit * pitch * 1e6:.3g} um")

@@ -161,7 +161,7 @@ def fit_arc(contact: Contact, cap: Cap, full: Mask | None) -> Arc:
         if not 2.0 < place[2] < 8.0 * max(scene.flat.shape):
             raise _no_outline()
     steps = (edges.bright - edges.dark)[good][:, None]
-    longer = np.arange(max(place[2] - 4.0 * width - 3.0, 0.5), place[2] + 8.0 * width + 8.0, _STEP)
+    longer = np.arange(max(place[2] - 3.5 * width, 0.5), place[2] + 7.0 * width + 6.0, _STEP)
     profiles = (seen.profiles(longer, kept)[good] - edges.dark[good][:, None]) / steps
     offset, mean = mean_profile(profiles, longer, edges.position[good])
     noise = 1.25 * scene.noise / float(step) / float(np.sqrt(seen.rays * good.sum()))
@@ -286,7 +286,6 @@ def _judged(
     # A blurred disc passes half its step inside its rim, since more light than dark lies around each point of the rim:
     # blurring moves a level line by curvature times half the variance, as diffusion does.
     shift = edges.width**2 / (2.0 * half_level)
-    # The ripple's form is a guess: its shift counts in part as uncertainty.
     # Fringes closer than the blur are not seen, and move the half level by their amplitude times their spacing. At the
     # blur of a few pixels that hides them some 3 % of it is left open (judged from drawn fringes of 5 to 15 %).
     hidden = _HIDDEN * edges.width * (1.0 - np.exp(-((edges.width / _HIDING) ** 2))) ** 2

@@ -8,7 +8,7 @@ from scipy.special import ndtr
 
 from reconcile.measure.measured import Array
 
-_SEEN = 0.004  # of the step: departure from a plain edge below which nobody need speak of fringes
+_SEEN = 0.002  # of the step: departure from a plain edge below which nobody need speak of fringes
 _FINE = 0.1  # of the blur: step of the convolution
 _PERIODS = (3.0, 5.0, 8.0)  # of the blur: where the search for the ripple starts; finer ones are blurred away
 
@@ -42,13 +42,13 @@ def fringe_shift(offset: Array, mean: Array, width: float, noise: float) -> tupl
     noise : standard deviation of a sample of `mean`
     """
     plain = float(np.std(_left(np.column_stack([np.ones(len(offset)), ndtr(offset / width)]), mean)))
-    if plain < max(_SEEN, 1.2 * noise):
+    if plain < max(_SEEN, 0.9 * noise):
         return 0.0, 0.0
-    low = np.array([-width, 0.8 * width, 2.0 * width, width])
-    high = np.array([2.0 * width, 1.3 * width, 12.0 * width, 12.0 * width])
+    low = np.array([-width, 0.8 * width, max(2.0 * width, 3.0), max(width, 1.5)])
+    high = np.array([2.0 * width, 1.3 * width, 12.0 * width + 5.0, 12.0 * width + 5.0])
     best = None
     for period in _PERIODS:
-        start = np.array([0.05 * width, width, period * width, period * width])
+        start = np.clip([0.05 * width, width, period * width, period * width], low, high)
         fit = least_squares(_miss, start, bounds=(low, high), max_nfev=40, args=(offset, mean))
         best = fit if best is None or fit.cost < best.cost else best
     if best is None or np.std(best.fun) > 0.5 * plain:  # a ripple does not describe it

@@ -16,6 +16,7 @@ NDArrayBool = NDArray[np.bool_]
 
 BLOCKS = 128  # along the shorter side, of the first look; a noisy frame gets fewer
 FEWEST = 24
+_MOST_THINGS = 6  # on the target that are looked at, the largest first
 _QUIET = 0.06  # of the frame's contrast: noise of a block that the search for edges bears
 STEEPEST = np.tan(np.radians(4.0))  # of the target's edge; tilts up to 3° are promised
 _ORDER = 2  # of the polynomial in columns and rows that describes the light
@@ -218,15 +219,20 @@ def _edge_of_band(dark: NDArrayBool) -> tuple[float, float]:
     return float(intercept), float(slope)
 
 
-def standing(scene: Scene, block: int, depth: float, margin: float = 0.0) -> Cap | None:
-    """Return the largest thing on the target that is darker than the light by `depth` (0 to 1), or None.
+def standing(scene: Scene, block: int, depth: float, margin: float = 0.0) -> tuple[list[Cap], float]:
+    """Return what stands on the target and is darker than the light by `depth`, the largest first.
 
     Parameters
     ----------
     scene : the frame
     block : pixels along one side of the blocks in which it is looked for
-    depth : how much darker than the light
+    depth : how much darker than the light, 0 to 1
     margin : how far above the target's edge its blur reaches [px]
+
+    Returns
+    -------
+    list of Cap, float
+        Those of a circular outline, and the area of the largest of all [px²].
     """
     margin = max(1.2 * block, margin)
     ratio = averaged(scene.flat, block)
@@ -234,15 +240,17 @@ def standing(scene: Scene, block: int, depth: float, margin: float = 0.0) -> Cap
     columns = (np.arange(ratio.shape[1]) + 0.5) * block - 0.5
     height = scene.above(columns[None, :], rows[:, None])
     mask = (ratio < 1.0 - depth) & (height > margin)
-    labels, number = ndimage.label(mask)
+    labels, _ = ndimage.label(mask)
     low = np.setdiff1d(np.unique(labels[(height < margin + 2.0 * block) & mask]), 0)
-    if not number or not len(low):
-        return None
-    sizes = ndimage.sum_labels(mask, labels, low)
-    if sizes.max() < 8:
-        return None
-    points = _outline(labels == low[int(np.argmax(sizes))], block)
-    return _cap(points, scene, block) if len(points) >= 5 else None
+    if not len(low):
+        return [], 0.0
+    sizes = np.atleast_1d(ndimage.sum_labels(mask, labels, low))
+    caps = []
+    for at in np.argsort(-sizes)[:_MOST_THINGS]:
+        points = _outline(labels == low[at], block) if sizes[at] >= 8 else np.empty((0, 2))
+        cap = _cap(points, scene, block) if len(points) >= 5 else None
+        caps += [cap] if cap is not None else []
+    return caps, float(sizes.max()) * block**2
 
 
 def _outline(mask: NDArrayBool, block: int) -> Array:
