@@ -178,6 +178,18 @@ def test_a_surface_without_a_crater_gives_a_limit_and_nothing_else(seed):
     assert only.limit == pytest.approx(3 * 7 * NM, rel=0.1, abs=0)
 
 
+def test_an_edge_lost_in_the_noise_leaves_the_depth_and_says_so():
+    site = Site(depth=40 * NM, step=0.0, rim=0.0, noise=22 * NM)
+    for seed in range(8):
+        finding = measure_map(draw(site, np.random.default_rng(seed)), site.pitch)
+        found = [one.kind for one in finding.measured]
+        depth = of(finding, "crater-depth")
+        assert abs(depth.value - site.depth) < 4 * depth.u
+        assert ("crater-diameter" in found) != any("lost in the noise" in remark for remark in finding.remarks)
+        for one in finding.measured[1:2]:
+            assert abs(one.value - site.diameter) < 4 * one.u
+
+
 def test_a_bump_is_no_crater():
     height = -draw(Site(rim=0.0), np.random.default_rng(12))
     (only,) = measure_map(height, 0.5 * UM).measured

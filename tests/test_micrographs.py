@@ -203,6 +203,21 @@ def test_specks_below_the_least_size_are_counted():
     assert any("5 particles below" in remark for remark in found.remarks)
 
 
+def test_contrast_of_thickness_is_told_and_flat_contrast_is_not():
+    size, rng = 240, np.random.default_rng(40)
+    places, fine = range(40, 240, 80), (np.arange(240 * FINER) + 0.5) / FINER
+    chord = np.zeros((size * FINER, size * FINER))
+    for x in places:
+        for y in places:
+            across = (fine[None, :] - x) ** 2 + (fine[:, None] - y) ** 2
+            chord = np.maximum(chord, 2 * np.sqrt(np.clip(20.0**2 - across, 0, None)))
+    light = np.exp(-0.02 * chord).reshape(size, FINER, size, FINER).mean(axis=(1, 3))  # weakly absorbing spheres
+    found = measure_micrograph(ndimage.gaussian_filter(light, 1.0) + 0.01 * rng.normal(size=light.shape), PITCH)
+    assert any("too small" in remark for remark in found.remarks)
+    flat = paint(np.array([(x, y, 20.0) for x in places for y in places]), size)
+    assert measure_micrograph(picture(flat, rng), PITCH).remarks == ()
+
+
 def test_the_unit_of_brightness_does_not_matter():
     rng, size = np.random.default_rng(39), 200
     frame = picture(paint(scatter(rng, size, 15, 20, 1.3), size), rng)

@@ -22,9 +22,12 @@ SEEN = 5.0  # noise of the smoothed map: shallower is no crater
 FEWEST_POINTS = 20  # of a crater
 SMOOTH = 1.5  # points; width of the Gaussian through which the outline is looked for
 ANGLES = 96
-HARMONICS = 4  # of the outline's distance from its centre
+# Waves of the outline's distance from its centre, by how deep the crater is in noise of the smoothed map: more would draw
+# the outline after the noise.
+HARMONICS = ((25.0, 4), (12.0, 2), (0.0, 1))
 BOTTOM = 0.45  # of the radius: a quarter of the area, and in a paraboloid the deepest fifth
 SURROUND_FROM = 2.5  # radii: at the latest; the rim lies within
+POOREST = 0.2  # relative uncertainty of a diameter; beyond it the edge was not seen
 FEWEST_RADIUS = 3.0  # points
 
 
@@ -34,8 +37,8 @@ class _Shape:
 
     row: float
     column: float
-    cosines: Array  # (HARMONICS + 1,) [px]
-    sines: Array  # (HARMONICS + 1,)
+    cosines: Array  # (waves + 1,) [px]
+    sines: Array  # (waves + 1,)
 
     def radius(self, angle: Array) -> Array:
         """Return the distance from the centre [px] in the directions `angle` [rad]."""
@@ -163,8 +166,8 @@ def _region(surface: Levelled) -> Mask | None:
     return np.asarray(ndimage.binary_fill_holes(inside))
 
 
-def _empty(surface: Levelled) -> Finding:
-    limit = LIMIT * surface.noise
+def _empty(surface: Levelled, at_least: float = 0.0) -> Finding:
+    limit = max(LIMIT * surface.noise, at_least)
     caption = f"no crater above the noise: depth below {1e9 * limit:.3g} nm"
     return Finding((Measured("crater-depth", None, None, limit=limit),), Outline((), caption), _remarks(surface))
 
@@ -179,9 +182,10 @@ def _outline(surface: Levelled, region: Mask) -> _Shape:
     filled = np.where(np.isfinite(smooth), smooth, 0.0)
     row, column = (float(value) for value in ndimage.center_of_mass(np.where(region, -filled, 0.0).clip(0)))
     start = np.sqrt(np.count_nonzero(region) / np.pi)
-    shape = _Shape(row, column, np.zeros(HARMONICS + 1), np.zeros(HARMONICS + 1))
+    waves = next(number for least, number in HARMONICS if deep >= least * noise)
+    shape = _Shape(row, column, np.zeros(waves + 1), np.zeros(waves + 1))
     for _ in range(3):
-        shape = _harmonics(filled, at, (shape.row, shape.column), start)
+        shape = _harmonics(filled, at, shape, start)
         if not FEWEST_RADIUS <= shape.cosines[0] <= max(surface.height.shape):
             raise Unmeasurable(
                 f"a crater of {max(shape.cosines[0], 0):.1f} points radius",
@@ -192,18 +196,19 @@ def _outline(surface: Levelled, region: Mask) -> _Shape:
         shape = _Shape(
             shape.row + float(shape.sines[1]), shape.column + float(shape.cosines[1]), shape.cosines, shape.sines
         )
-    shape = _harmonics(filled, at, (shape.row, shape.column), start)
+    shape = _harmonics(filled, at, shape, start)
     if np.min(shape.radius(np.linspace(0, 2 * np.pi, 360))) < 0.2 * shape.cosines[0]:
         raise Unmeasurable("a pit with a ragged outline", "a round crater", "Measure it by hand.")
     return shape
 
 
-def _harmonics(smooth: Array, at: float, centre: tuple[float, float], start: float) -> _Shape:
-    """Return the outline at a level as seen from a centre: crossings along rays, outliers left out."""
+def _harmonics(smooth: Array, at: float, shape: _Shape, start: float) -> _Shape:
+    """Return the outline at a level as seen from the centre of `shape`: crossings along rays, outliers left out."""
+    waves = shape.cosines.size - 1
     angle = np.arange(ANGLES) * 2 * np.pi / ANGLES
     reach = np.arange(0.0, 3 * start + 4, 0.25)
-    rows = centre[0] + reach[None, :] * np.sin(angle)[:, None]
-    columns = centre[1] + reach[None, :] * np.cos(angle)[:, None]
+    rows = shape.row + reach[None, :] * np.sin(angle)[:, None]
+    columns = shape.column + reach[None, :] * np.cos(angle)[:, None]
     rays = ndimage.map_coordinates(smooth, [rows, columns], order=1, mode="nearest")
     below = rays < at
     below[:, reach < 0.5 * start] = True  # rough bottoms are no edge
@@ -212,7 +217,7 @@ def _harmonics(smooth: Array, at: float, centre: tuple[float, float], start: flo
     low, high = rays[np.arange(ANGLES), last - 1], rays[np.arange(ANGLES), last]
     share = np.clip((at - low) / np.where(high > low, high - low, 1.0), 0, 1)
     radius = np.where(crossed, reach[last - 1] + 0.25 * share, np.nan)
-    orders = np.arange(HARMONICS + 1)
+    orders = np.arange(waves + 1)
     design = np.concatenate([np.cos(np.outer(angle, orders)), np.sin(np.outer(angle, orders[1:]))], axis=1)
     used = np.isfinite(radius)
     solution = np.zeros(design.shape[1])
@@ -222,7 +227,7 @@ def _harmonics(smooth: Array, at: float, centre: tuple[float, float], start: flo
         solution = np.linalg.lstsq(design[used], radius[used], rcond=None)[0]
         away = np.abs(radius - design @ solution)
         used = np.isfinite(radius) & (away <= max(3.5 * MAD * float(np.nanmedian(away)), 0.3))
-    return _Shape(*centre, solution[: HARMONICS + 1], np.concatenate([np.zeros(1), solution[HARMONICS + 1 :]]))
+    return _Shape(shape.row, shape.column, solution[: waves + 1], np.concatenate([np.zeros(1), solution[waves + 1 :]]))
 
 
 def _excluded(surface: Levelled, distance: Array, edge: float, radius: float) -> tuple[Mask, float]:
@@ -262,32 +267,37 @@ def _finding(surface: Levelled, crater: _Crater, pixel_pitch: float) -> Finding:
     reference_u = np.hypot(surface.level_u(distance < BOTTOM * edge.at), crater.rim_left)
     depth_u = float(np.sqrt(bottom_u**2 + reference_u**2 + raster_u**2))
     if depth < LIMIT * depth_u:
-        return _empty(surface)
+        return _empty(surface, depth + 2 * depth_u)
     radius = edge.at * shape.area_radius
     # The level's own error moves the crossing as far as the profile is flat there; a step holds it.
-    radius_u = float(np.hypot(edge.u * shape.area_radius, level_u / edge.slope))
+    radius_u = float(np.hypot(edge.u * shape.area_radius, level_u / max(edge.slope, depth / radius)))
     diameter, diameter_u = 2 * radius * pixel_pitch, 2 * radius_u * pixel_pitch
-    area = np.pi * radius**2
-    # Points on the edge count by the share of them that lies inside; what they mix of both sides is in the uncertainty.
-    share = np.clip(0.5 + (edge.at - distance[known]) * shape.area_radius, 0, 1)
-    volume = -float(np.average(surface.height[known], weights=share)) * area * pixel_pitch**2
-    point_u = surface.noise * np.sqrt(surface.together / float(share.sum()))
-    mixed_u = 2 * np.pi * radius * edge.slope / 6
-    volume_u = pixel_pitch**2 * float(np.hypot(area * np.hypot(level_u, point_u), mixed_u))
-    measured = (
-        Measured("crater-depth", depth, depth_u),
-        Measured("crater-diameter", diameter, diameter_u),
-        Measured("crater-volume", volume, volume_u),
-    )
+    measured = [Measured("crater-depth", depth, depth_u)]
+    remarks = _remarks(surface, shape)
+    if diameter_u < POOREST * diameter:
+        measured += [Measured("crater-diameter", diameter, diameter_u), _volume(surface, crater, level_u, pixel_pitch)]
+    else:
+        remarks += ("the edge of the crater is lost in the noise: its diameter and volume were not taken",)
     caption = f"depth {1e6 * depth:.4g} µm, diameter {1e6 * diameter:.4g} µm"
     strokes = (
         Stroke(shape.line(edge.at), "found"),
         Stroke(shape.line(BOTTOM * edge.at), "reference"),
-        Stroke(np.argwhere(~np.isfinite(surface.height))[:500, ::-1].astype(float), "left-out", marks=True),
+        Stroke(np.argwhere(~known)[:500, ::-1].astype(float), "left-out", marks=True),
     )
-    return Finding(
-        measured, Outline(tuple(one for one in strokes if len(one.points)), caption), _remarks(surface, shape)
-    )
+    return Finding(tuple(measured), Outline(tuple(one for one in strokes if len(one.points)), caption), remarks)
+
+
+def _volume(surface: Levelled, crater: _Crater, level_u: float, pixel_pitch: float) -> Measured:
+    """Return the volume below the surround: the area times the mean depth of its points."""
+    known, edge, radius = np.isfinite(surface.height), crater.edge, crater.edge.at * crater.shape.area_radius
+    area = np.pi * radius**2
+    # Points on the edge count by the share of them that lies inside; what they mix of both sides is in the uncertainty.
+    share = np.clip(0.5 + (edge.at - crater.distance[known]) * crater.shape.area_radius, 0, 1)
+    volume = -float(np.average(surface.height[known], weights=share)) * area * pixel_pitch**2
+    point_u = surface.noise * np.sqrt(surface.together / float(share.sum()))
+    mixed_u = 2 * np.pi * radius * edge.slope / 6
+    u = pixel_pitch**2 * float(np.hypot(area * np.hypot(level_u, point_u), mixed_u))
+    return Measured("crater-volume", volume, u)
 
 
 def _bottom(surface: Levelled, shape: _Shape, distance: Array, edge: float) -> tuple[float, float]:

@@ -18,6 +18,7 @@ LEAST_WINDOW = 4.0  # points
 OUTER = (0.35, 0.7)  # of twice that, outside
 RIDGE = 1e-9  # of the scaled normal equations: a step at the window's end has no parabola beyond it
 UNRESOLVED = 0.15  # points: how far a step too low to be told apart from the slope beside it moves the crossing
+VAGUE = 0.2  # points: an edge without a step less sure than this is taken from the whole outer half of the profile
 PARTIAL = 0.25  # of a step: how far below the surround its upper end may seem to lie
 FLOOR = 0.008  # points: what the raster leaves of a step's place however little noise there is
 
@@ -80,7 +81,31 @@ def find_edge(distance: Array, height: Array, radius: float, noise: float, toget
     edges = [_edge(_cut(profile, about - inner, about + share * outer), about, 0.6 * inner) for share in OUTER]
     # Rims fall off over lengths of their own: two windows outside tell how much the edge depends on that.
     best, other = sorted(edges, key=lambda one: one.misfit)
+    if not best.step and best.u > VAGUE:
+        # A step too low to be seen would lie inside the extrapolated crossing: the truth is between the two.
+        wide = _extrapolated(profile, about, -radius)
+        u = 0.5 * float(np.sqrt(best.u**2 + wide.u**2 + (best.at - wide.at) ** 2))
+        return replace(wide, at=0.5 * (best.at + wide.at), u=u)
     return replace(best, u=float(np.hypot(best.u, 0.3 * (best.at - other.at))))
+
+
+def _extrapolated(profile: Profile, about: float, middle: float) -> Edge:
+    """Return where a parabola through the whole outer half of the profile meets the surround: for edges lost in noise.
+
+    The parabola has its lowest place in the middle of the crater, as that of a Gaussian beam has.
+    """
+    used = profile.x < about - 0.5
+    x, h, sd = (profile.x[used] - middle) ** 2, profile.h[used], profile.sd[used]
+    design = np.stack([np.ones_like(x), x], axis=1) / sd[:, None]
+    covariance = np.linalg.inv(design.T @ design)
+    bottom, bend = covariance @ (design.T @ (h / sd))
+    if bend <= 0 or bottom >= 0:
+        return Edge(about, about - profile.x[0], 0.0, False, np.inf)
+    reach = float(np.sqrt(-bottom / bend))
+    terms = np.array([1.0, reach**2])
+    slope = 2 * float(bend) * reach
+    u = float(np.sqrt(terms @ covariance @ terms)) / slope
+    return Edge(middle + reach, float(np.hypot(u, UNRESOLVED)), slope, False, 1.0)
 
 
 def _cut(profile: Profile, start: float, end: float) -> Profile:
@@ -98,10 +123,11 @@ def _edge(window: Profile, about: float, reach: float) -> Edge:
     step, place_u = _best_step(window, about, reach)
     jump, jump_u = float(step.solution[3]), float(np.sqrt(step.covariance[3, 3]))
     inner = float(step.solution[0])
+    crossing = _crossing(step, reach)
     if jump > SURE * jump_u and inner < 0 and inner + jump > -PARTIAL * jump:
         slope = jump / (step.blur * np.sqrt(2 * np.pi)) + abs(float(step.solution[1]))
-        return Edge(step.at, float(np.hypot(place_u, FLOOR)), slope, True, step.misfit)
-    crossing = _crossing(step, reach)
+        doubt = 0.5 * abs(step.at - crossing.at) if jump < 2 * SURE * jump_u else 0.0  # noise may feign a weak step
+        return Edge(step.at, float(np.sqrt(place_u**2 + FLOOR**2 + doubt**2)), slope, True, step.misfit)
     return replace(crossing, u=float(np.hypot(crossing.u, min(place_u, UNRESOLVED))))
 
 

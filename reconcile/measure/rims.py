@@ -23,6 +23,7 @@ CLEAR_PIXELS = 1.0
 EASE = 2.0  # px: a particle's own half level may lie that far inside the common one
 CORE = 0.6  # of the radius: where a particle's own darkness is taken
 SHARPEST_FROM = 6.0  # px; radius from which a rim tells the blur
+_SHOULDER = 0.75  # of the rim's distance
 _HALF_WAY = 0.75  # px on both sides of the rim, over which its slope is taken
 
 
@@ -35,6 +36,9 @@ class Rims:
     rim: Array  # (n, RAYS) distance of the half level from the centre, hidden parts filled in [px]
     free: Mask  # (n, RAYS) seen; False: hidden by a neighbour, outside the picture, or an outlier
     rough: Array  # (n,) relative scatter of the seen rim about an ellipse
+    shoulder: (
+        Array  # (n,) darkness at three quarters of the rim's distance over the particle's own; NaN: too little was seen
+    )
     slope: Array  # (n,) of darkness across the rim over the particle's own darkness [1/px]; NaN: too little was seen
 
     @property
@@ -88,13 +92,14 @@ def _seen(spline: Array, dark: Mask, circles: tuple[Array, Array, Array]) -> Rim
     )
     free = crossed & inside & (crossing < CLEAR * _neighbours(row, column, radius) - CLEAR_PIXELS)
     rim, free, rough = _filled(crossing, free, radius)
-    across = np.array([-_HALF_WAY, _HALF_WAY])[:, None, None] + rim[None]
+    across = np.stack([rim - _HALF_WAY, rim + _HALF_WAY, _SHOULDER * rim])
     places = [row[:, None] + across * np.sin(angle), column[:, None] + across * np.cos(angle)]
-    both = ndimage.map_coordinates(spline, places, order=3, prefilter=False, mode="nearest")
-    drop = np.where(free, (both[0] - both[1]) / (2 * _HALF_WAY) / own[:, None], 0).sum(axis=1)
+    levels = ndimage.map_coordinates(spline, places, order=3, prefilter=False, mode="nearest")
+    drop = np.where(free, (levels[0] - levels[1]) / (2 * _HALF_WAY) / own[:, None], 0).sum(axis=1)
     seen = free.sum(axis=1)
-    slope = np.where(seen > RAYS // 2, drop / np.maximum(seen, 1), np.nan)
-    return Rims(row, column, rim, free, rough, slope)
+    shoulder = np.where(free, levels[2] / own[:, None], 0).sum(axis=1)
+    drop, shoulder = (np.where(seen > RAYS // 2, one / np.maximum(seen, 1), np.nan) for one in (drop, shoulder))
+    return Rims(row, column, rim, free, rough, shoulder, drop)
 
 
 def _crossings(rays: Array, reach: Array, level: Array, within: Mask) -> tuple[Array, Mask]:
@@ -202,6 +207,12 @@ def unblurred(radius: Array, blur: Array | float) -> Array:
     scaled = radius / width
     small = np.interp(scaled, seen, true)
     return np.asarray(width * np.where(scaled < seen[-1], small, scaled + 0.5 / np.maximum(scaled, 1e-9)))
+
+
+def flat_shoulder(radius: Array, blur: float) -> Array:
+    """Return what `Rims.shoulder` would be for discs of even darkness: (n,)."""
+    width = max(blur, 1e-6)
+    return _blurred(radius / width, _SHOULDER * radius / width)
 
 
 def _blurred(true: Array, distance: Array) -> Array:
