@@ -169,3 +169,24 @@ def test_a_histogram_that_cannot_be_measured_is_refused_with_a_sentence(lower, u
 def test_a_list_that_cannot_be_measured_is_refused_with_a_sentence(diameters, sentence):
     with pytest.raises(ValueError, match=sentence):
         from_diameters(np.array(diameters) * NM)
+
+
+def test_a_weight_of_two_moves_the_median_like_a_particle_counted_twice_and_equal_weights_change_nothing():
+    rng = np.random.default_rng(41)
+    diameters = draw(12 * NM, 1.4, 300, rng)
+    often = rng.integers(1, 4, diameters.size)
+    weighted = from_diameters(diameters, often)
+    repeated = from_diameters(np.repeat(diameters, often))
+    assert weighted.median == pytest.approx(repeated.median, rel=1e-6, abs=0)
+    assert weighted.n == 300
+    # Kish: unequal weights tell less than as many equal ones
+    expected = math.log(weighted.geometric_sd) * math.sqrt(np.sum(often**2)) / often.sum()
+    assert weighted.median_u / weighted.median == pytest.approx(expected, rel=1e-4)
+    alike, plain = from_diameters(diameters, np.full(300, 7.0)), from_diameters(diameters)
+    assert alike.median_u == pytest.approx(plain.median_u, rel=1e-9, abs=0)
+
+
+@pytest.mark.parametrize("weights", [[1.0] * 11, [0.0] * 12, [math.nan] * 12, [-1.0] * 12])
+def test_weights_that_are_none_are_refused(weights):
+    with pytest.raises(ValueError, match="weight"):
+        from_diameters(np.linspace(8, 20, 12) * NM, weights)
