@@ -160,7 +160,7 @@ def stored(ensembles: list[Ensemble], k: int = 3) -> Stored:
     """Return a checkpoint's content around these ensembles; the rest is made up."""
     points = {0: np.arange(5, dtype=np.intp), 7: np.array([3, 9], dtype=np.intp)}
     reach = (np.arange(float(k)), 2.0 * np.eye(k))
-    return Stored(np.arange(float(k)), covariance_of(k), -12.5, reach, (4, 11), points, ensembles)
+    return Stored(np.arange(float(k)), covariance_of(k), -12.5, reach, (4, 11), points, 0.0125, ensembles)
 
 
 @pytest.fixture(scope="module")

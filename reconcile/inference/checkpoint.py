@@ -52,6 +52,7 @@ class Stored:
     reach: tuple[Array, Array]  # mean and covariance of the priors on the coordinates
     late: tuple[int, ...]  # rows of radii left out as read after the collapse
     points: dict[int, Index] | None  # of the lattice, by shot; None: no reading belongs to a shot
+    step: float  # of the lattice
     ensembles: list[Ensemble]
 
 
@@ -128,6 +129,7 @@ def _packed(stored: Stored) -> dict[str, Any]:
         "reach_covariance": stored.reach[1],
         "log_prob_at_mode": np.array(stored.log_prob),
         "late": np.array(stored.late, dtype=np.intp),
+        "step": np.array(stored.step),
         "ensembles": np.array(len(stored.ensembles)),
     }
     if stored.points is not None:
@@ -167,10 +169,11 @@ def _unpacked(arrays: dict[str, Any]) -> Stored:
         state = (str(arrays[f"e{number}.generator"]), arrays[f"e{number}.keys"], at, has_gauss, gauss)
         position, chain, log_prob = (arrays[f"e{number}.{name}"] for name in _ENSEMBLE_ARRAYS)
         ensembles.append(Ensemble(Mixture(parts, shares), position, state, chain, log_prob, int(evaluations), accepted))
+    step = float(arrays["step"])
     late = tuple(int(row) for row in arrays["late"])
     reach = arrays["reach_mean"], arrays["reach_covariance"]
     return Stored(
-        arrays["mode"], arrays["covariance"], float(arrays["log_prob_at_mode"]), reach, late, points, ensembles
+        arrays["mode"], arrays["covariance"], float(arrays["log_prob_at_mode"]), reach, late, points, step, ensembles
     )
 
 

@@ -12,7 +12,7 @@ from reconcile.campaign.readings import Gathered
 from reconcile.inference.adapt import Begin
 from reconcile.inference.checkpoint import Checkpoint, Stored
 from reconcile.inference.coordinates import Inputs
-from reconcile.inference.lattice import STEP, Lattice, full_points
+from reconcile.inference.lattice import Lattice, full_points
 from reconcile.inference.memory import keep_freed_memory
 from reconcile.inference.model import Array, Expected
 from reconcile.inference.problem import Data, Problem
@@ -78,7 +78,7 @@ def fit(
     else:
         start, late = _taken_up(Data.of(gathered, without), stored), stored.late
     lattice = start.problem.likelihood.lattice
-    points = None if lattice is None else lattice.points()
+    points, step = (None, 0.0) if lattice is None else (lattice.points(), lattice.step)
     draws = sample(
         start.problem,
         Begin(start.mode, start.covariance, start.reach),
@@ -89,7 +89,7 @@ def fit(
         memory=Memory(
             None if stored is None else stored.ensembles,
             lambda now: checkpoint.save(
-                Stored(start.mode, start.covariance, start.log_prob, start.reach, late, points, now)
+                Stored(start.mode, start.covariance, start.log_prob, start.reach, late, points, step, now)
             ),
         ),
     )
@@ -113,7 +113,7 @@ def _begin(data: Data, rng: np.random.Generator) -> tuple[Start, tuple[int, ...]
 def _taken_up(data: Data, stored: Stored) -> Start:
     """Return the start of an interrupted fit."""
     data = data.leave_out(stored.late)
-    problem = Problem(data, None if stored.points is None else Lattice.of(data.table, stored.points, STEP))
+    problem = Problem(data, None if stored.points is None else Lattice.of(data.table, stored.points, stored.step))
     return Start(problem, stored.mode, stored.covariance, stored.log_prob, stored.reach, ())
 
 
@@ -158,8 +158,8 @@ def _integral_error(problem: Problem, position: Array, rng: np.random.Generator)
     lattice = problem.likelihood.lattice
     if lattice is None:
         return 0.0
-    table = problem.data.table
-    dense = problem.on(Lattice.of(table, full_points(table, lattice.shots, 0.5 * STEP), 0.5 * STEP))
+    table, half = problem.data.table, 0.5 * lattice.step
+    dense = problem.on(Lattice.of(table, full_points(table, lattice.shots, half), half))
     chosen = position[rng.choice(len(position), size=min(_CHECKED, len(position)), replace=False)]
     missed = dense.over_draws(chosen, dense.likelihood) - problem.over_draws(chosen, problem.likelihood)
     return float(np.abs(missed - missed.mean()).max())

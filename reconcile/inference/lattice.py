@@ -12,7 +12,9 @@ from reconcile.inference.model import Array, Conditions, Exposures
 
 Index = NDArray[np.intp]
 
-STEP = 0.0125  # in the logarithm of energy: below 1.2 standard deviations of any ordinary shot
+STEP = 0.0125  # in the logarithm of energy: below 1.2 standard deviations of an ordinary shot
+_STEP_OF_NARROWEST = 1.4  # step over a shot's standard deviation: the trapezoid rule is then right to 1e-4
+_MOST_HALVINGS = 4
 REACH = 2.1  # largest deviation considered, a factor of 8; a misread beyond that lies outside
 
 
@@ -104,6 +106,26 @@ def full_points(table: ShotTable, shots: Index, step: float) -> dict[int, Index]
     lowest = np.ceil((table.log_energy[shots] - REACH) / step).astype(np.intp)
     highest = np.floor((table.log_energy[shots] + REACH) / step).astype(np.intp)
     return {int(shot): np.arange(a, b + 1) for shot, a, b in zip(shots, lowest, highest, strict=True)}
+
+
+def fine_step(lattice: Lattice, weights: Array) -> float:
+    """Return the lattice's step, halved until it resolves the most precisely read shot.
+
+    Parameters
+    ----------
+    lattice : on which `weights` stand
+    weights : (q, draws) integrand of each pair
+    """
+    share = weights / np.add.reduceat(weights, lattice.first, axis=0)[lattice.pair_shot]
+    mean = np.add.reduceat(share * lattice.deviation, lattice.first, axis=0)
+    square = np.add.reduceat(share * (lattice.deviation - mean[lattice.pair_shot]) ** 2, lattice.first, axis=0)
+    # A shot far narrower than the step shows one point only, and so the smallest step.
+    narrowest = float(np.sqrt(square.min()))
+    step = lattice.step
+    for _ in range(_MOST_HALVINGS):
+        if step > _STEP_OF_NARROWEST * narrowest:
+            step *= 0.5
+    return step
 
 
 def kept_points(lattice: Lattice, weights: Array, floor: float, neighbours: int) -> dict[int, Index]:

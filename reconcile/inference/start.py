@@ -10,7 +10,7 @@ from scipy import optimize, special
 
 from reconcile.campaign.kinds import KINDS
 from reconcile.inference.coordinates import Inputs
-from reconcile.inference.lattice import STEP, Lattice, full_points, kept_points
+from reconcile.inference.lattice import STEP, Lattice, fine_step, full_points, kept_points
 from reconcile.inference.model import (
     RELATIVE_SCATTER,
     TINY,
@@ -174,19 +174,28 @@ def _reading_residuals(data: Data, inputs: Inputs) -> list[Array]:
 
 
 def on_lattice_of(problem: Problem, centres: Array, root: Array, rng: np.random.Generator) -> Problem:
-    """Return the problem on the lattice points that matter to draws around some places (m, k)."""
-    data = problem.data
-    shots = data.likelihood.read_shots
+    """Return the problem on the lattice points that matter to draws around some places (m, k), finely enough spaced."""
+    shots = problem.data.likelihood.read_shots
     if not len(shots):
         return problem
-    full = Lattice.of(data.table, full_points(data.table, shots, STEP), STEP)
-    problem = problem.on(full)
     scattered = centres[rng.integers(len(centres), size=4 * _PROBES)]
     scattered = scattered + rng.standard_normal(scattered.shape) @ root.T
     usable = scattered[np.isfinite(problem.log_prior(scattered)[0])][: _PROBES - len(centres)]
     probes = np.concatenate([centres, usable])
-    weights = problem.over_draws(probes, problem.likelihood.integrand)
-    return problem.on(Lattice.of(data.table, kept_points(full, weights, _FLOOR, _NEIGHBOURS), STEP))
+    full, weights = _full_lattice(problem, probes, STEP)
+    step = fine_step(full, weights)
+    if step < STEP:
+        full, weights = _full_lattice(problem, probes, step)
+    points = kept_points(full, weights, _FLOOR, _NEIGHBOURS)
+    return problem.on(Lattice.of(problem.data.table, points, step))
+
+
+def _full_lattice(problem: Problem, probes: Array, step: float) -> tuple[Lattice, Array]:
+    """Return the lattice of every point within reach, and the integrand there (pairs, probes)."""
+    table, shots = problem.data.table, problem.data.likelihood.read_shots
+    full = Lattice.of(table, full_points(table, shots, step), step)
+    dense = problem.on(full)
+    return full, dense.over_draws(probes, dense.likelihood.integrand)
 
 
 @dataclass(frozen=True, slots=True)

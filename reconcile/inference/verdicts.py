@@ -12,7 +12,6 @@ from reconcile.campaign.quantity import shown
 from reconcile.campaign.readings import Gathered, Shot
 from reconcile.inference.coordinates import Inputs
 from reconcile.inference.fit import Fitted
-from reconcile.inference.lattice import STEP
 from reconcile.inference.likelihood import MISREAD_SPREAD
 from reconcile.inference.model import Array, Expected
 from reconcile.inference.outcome import ReadingResult, ReadingVerdict, ShotResult, ShotVerdict
@@ -89,7 +88,7 @@ def _look(fitted: Fitted, rng: np.random.Generator) -> _Looked:
             for position, shot in enumerate(lattice.shots):
                 own = lattice.pairs_of(position)
                 points = lattice.deviation[own, 0]
-                deviation[shot, part] = _drawn(points, details.weights[own], rng)
+                deviation[shot, part] = _drawn(points, details.weights[own], lattice.step, rng)
     if lattice is not None:
         misread[lattice.shots] = found[lattice.shots] / n_draws
     stray, mean, variance = sums / n_draws
@@ -103,11 +102,11 @@ def _from_log_alone(inputs: Inputs, shape: tuple[int, int], rng: np.random.Gener
     return rng.standard_normal(shape) * np.where(wrong, MISREAD_SPREAD, inputs["energy_jitter"])
 
 
-def _drawn(points: Array, weights: Array, rng: np.random.Generator) -> Array:
+def _drawn(points: Array, weights: Array, step: float, rng: np.random.Generator) -> Array:
     """Draw one point a column by its weight (points, draws), spread evenly over the lattice's step."""
     ladder = np.cumsum(weights, axis=0)
     rung = (ladder < rng.uniform(size=weights.shape[1]) * ladder[-1]).sum(axis=0)
-    return points[np.minimum(rung, len(points) - 1)] + STEP * (rng.uniform(size=weights.shape[1]) - 0.5)
+    return points[np.minimum(rung, len(points) - 1)] + step * (rng.uniform(size=weights.shape[1]) - 0.5)
 
 
 def _reading_results(fitted: Fitted, gathered: Gathered, looked: _Looked) -> tuple[ReadingResult, ...]:
