@@ -76,9 +76,12 @@ SHOTS = (
 )
 
 
+TABLE_KIND = {"camera": "shadowgraph", "traces": "probe-trace"}  # of tables whose readings are not of the table's own kind
+
+
 def reading(kind: str, shot: str, table: str, value: float, u: float, delay: float | None = None) -> Reading:
     """Return a measured reading of a shot."""
-    return Reading(kind, shot, None, table, HERE, delay=delay, value=value, u=u)
+    return Reading(kind, shot, None, table, HERE, delay=delay, value=value, u=u, table_kind=TABLE_KIND.get(table))
 
 
 def below(kind: str, shot: str, table: str, limit: float) -> Reading:
@@ -118,8 +121,8 @@ READINGS = (
         reading("bubble-radius", "filmed", "camera", 1.12e-4 - 1.1e-5 * (n - 7.5) ** 2 / 14, 2e-6, 1.3e-6 * n + 1e-6)
         for n in range(15)
     ),
-    Reading("median-diameter", None, "vial", "microscope", HERE, value=1.30e-8, u=4e-10),
-    Reading("median-diameter", None, "vial", "microscope", HERE, value=1.21e-8, u=4e-10),
+    Reading("median-diameter", None, "vial", "microscope", HERE, value=1.30e-8, u=4e-10, table_kind="micrograph"),
+    Reading("median-diameter", None, "vial", "microscope", HERE, value=1.21e-8, u=4e-10, table_kind="micrograph"),
 )
 
 

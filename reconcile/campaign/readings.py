@@ -45,6 +45,7 @@ class Reading:
     limit: float | None = None  # [SI] the reading lies below this; None: it was measured
     set_aside: str | None = None  # why a person took it out of the fit
     kept: str | None = None  # why a person vouches for it
+    table_kind: str | None = None  # of that table; None: the reading's kind. Tables of one name may be of several kinds
 
 
 @dataclass(frozen=True, slots=True)

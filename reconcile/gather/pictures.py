@@ -137,6 +137,7 @@ class Pictures:
                     u=one.u,
                     limit=one.limit,
                     set_aside=source.set_aside,
+                    table_kind=table.kind,
                 )
             )
         return readings
@@ -159,7 +160,17 @@ class Pictures:
         if sizes.note:
             self.collected.note(sample.place, f"sample '{name}': {sizes.note}")
         return [
-            Reading(kind, None, name, table.name, sample.place, value=value, u=u, set_aside=sample.set_aside)
+            Reading(
+                kind,
+                None,
+                name,
+                table.name,
+                sample.place,
+                value=value,
+                u=u,
+                set_aside=sample.set_aside,
+                table_kind=table.kind,
+            )
             for kind, value, u in (
                 ("median-diameter", sizes.median, sizes.median_u),
                 ("geometric-sd", sizes.geometric_sd, sizes.geometric_sd_u),

@@ -123,7 +123,17 @@ class SizeTable:
             self.collected.note(sample.place, f"sample '{name}': {sizes.note}")
         aside = f"struck through at {sample.struck}" if sample.struck else None
         return [
-            Reading(kind, None, name, self.table.name, sample.place, value=value, u=u, set_aside=aside)
+            Reading(
+                kind,
+                None,
+                name,
+                self.table.name,
+                sample.place,
+                value=value,
+                u=u,
+                set_aside=aside,
+                table_kind=self.table.kind,
+            )
             for kind, value, u in (
                 ("median-diameter", sizes.median, sizes.median_u),
                 ("geometric-sd", sizes.geometric_sd, sizes.geometric_sd_u),

@@ -13,7 +13,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from reconcile.campaign.campaign import Table
-from reconcile.campaign.kinds import KINDS, yields
+from reconcile.campaign.kinds import KINDS
 from reconcile.campaign.readings import Reading
 from reconcile.inference import mixture
 from reconcile.inference.lattice import Index, Lattice, ShotTable
@@ -73,7 +73,7 @@ class Likelihood:
         samples: dict[str, Index],
     ) -> None:
         self.conditions, self.table, self.readings, self.tables = conditions, table, readings, tables
-        table_of = {(t.name, kind): n for n, t in reversed(list(enumerate(tables))) for kind in yields(t.kind)}
+        table_of = {(t.name, t.kind): n for n, t in reversed(list(enumerate(tables)))}
         self.slots = arrange(readings, shots, table_of)
         used = [name for name in samples if any(reading.sample == name for reading in readings)]
         self.samples = [samples[name] for name in used]

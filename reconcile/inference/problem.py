@@ -69,14 +69,13 @@ class Data:
         for number, shot in enumerate(gathered.shots):
             if shot.sample is not None:
                 samples.setdefault(shot.sample, []).append(number)
-        kind_of = {entry.name: entry.kind for entry in campaign.tables}
         rows = tuple(
             row
             for row, reading in enumerate(gathered.readings)
             if reading.set_aside is None
             and KINDS[reading.kind].fitted
             and reading.kind not in without
-            and kind_of[reading.table] not in without
+            and (reading.table_kind or reading.kind) not in without
             and (reading.shot in shots or reading.sample in samples)
         )
         readings = tuple(gathered.readings[row] for row in rows)

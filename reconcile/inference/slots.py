@@ -44,7 +44,7 @@ def arrange(readings: Sequence[Reading], target_of: dict[str, int], table_of: di
     ----------
     readings : with their row, every one of a fitted kind
     target_of : index of each shot or sample by name
-    table_of : index of each table by its name and the kind it yields
+    table_of : index of each table by its name and kind
 
     Readings of one target, kind and delay are repeats; those below a limit stand in cells of their own.
     """
@@ -58,11 +58,15 @@ def arrange(readings: Sequence[Reading], target_of: dict[str, int], table_of: di
     waves: dict[tuple[_Sort, int], list[_Member]] = defaultdict(list)
     seen: dict[tuple[_Sort, int], int] = defaultdict(int)
     for (kind, target, delay, alone), unsorted in cells.items():
-        tables, rows = zip(*sorted((table_of[readings[row].table, kind], row) for row in unsorted), strict=True)
+        tables, rows = zip(*sorted((_table_of(readings[row], table_of), row) for row in unsorted), strict=True)
         sort = (kind, alone >= 0, tables)
         waves[sort, seen[sort, target]].append((target, delay, rows))
         seen[sort, target] += 1
     return [_slot(sort, members, readings) for (sort, _), members in waves.items()]
+
+
+def _table_of(reading: Reading, table_of: dict[tuple[str, str], int]) -> int:
+    return table_of[reading.table, reading.table_kind or reading.kind]
 
 
 def _slot(sort: _Sort, members: list[_Member], readings: Sequence[Reading]) -> Slot:
