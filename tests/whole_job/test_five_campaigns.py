@@ -2,7 +2,8 @@
 
 The campaigns are simulated with fuller physics than the reduced model holds (integrated bubble motion, full shock
 relations, exact dispersion of the interface). One is invented, written and closed out here from its tables; the other
-four are read from tables that were stored when the seeds were fixed.
+four are read from tables that were stored when the seeds were fixed. With `-m long` all five are rendered as frames,
+traces, maps and micrographs, measured and closed out.
 """
 
 from __future__ import annotations
@@ -95,11 +96,16 @@ def score(folder: Path) -> Score:
     )
 
 
-@pytest.fixture(scope="module")
-def scores(tmp_path_factory: pytest.TempPathFactory) -> list[Score]:
-    fresh = tmp_path_factory.mktemp("campaign") / "fresh"
-    invent(FRESH).write(fresh, style="plain")
-    folders = [fresh, *(STORED / str(seed) for seed in SEEDS)]
+@pytest.fixture(scope="module", params=["tables", pytest.param("files", marks=pytest.mark.long)])
+def scores(request: pytest.FixtureRequest, tmp_path_factory: pytest.TempPathFactory) -> list[Score]:
+    place = tmp_path_factory.mktemp("campaigns")
+    if request.param == "tables":
+        invent(FRESH).write(place / "fresh", style="plain")
+        folders = [place / "fresh", *(STORED / str(seed) for seed in SEEDS)]
+    else:
+        folders = [place / str(seed) for seed in (FRESH, *SEEDS)]
+        for folder in folders:
+            invent(int(folder.name)).write(folder, style="files")
     with ProcessPoolExecutor(2, get_context("spawn")) as pool:
         return list(pool.map(score, folders))
 
