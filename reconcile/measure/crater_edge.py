@@ -5,22 +5,27 @@ from __future__ import annotations
 from dataclasses import dataclass, replace
 
 import numpy as np
-from scipy.special import ndtr
+from scipy.special import log_ndtr, ndtr
 
 from reconcile.measure.levelling import Array
 from reconcile.measure.measured import Unmeasurable
 
 BIN = 0.25  # points
 BLURS = (0.3, 0.45, 0.7, 1.0, 1.5)  # points; standard deviations by which instrument and averaging widen a step
+# Points; lengths over which a step's foot falls inside its upper edge, as a depth reached soon after threshold has it.
+FEET = (0.0, 0.35, 0.5, 0.7, 1.0, 1.4, 2.0, 2.8)
 SURE = 5.0  # standard uncertainties by which a step must stand out
 WINDOW = 0.2  # of the radius, on either side of the edge
 LEAST_WINDOW = 4.0  # points
 OUTER = (0.35, 0.7)  # of twice that, outside
 RIDGE = 1e-9  # of the scaled normal equations: a step at the window's end has no parabola beyond it
 UNRESOLVED = 0.15  # points: how far a step too low to be told apart from the slope beside it moves the crossing
-VAGUE = 0.2  # points: an edge without a step less sure than this is taken from the whole outer half of the profile
+VAGUE = 1.0  # points: an edge without a step less sure than this is taken from the whole outer half of the profile
 PARTIAL = 0.25  # of a step: how far below the surround its upper end may seem to lie
 FLOOR = 0.008  # points: what the raster leaves of a step's place however little noise there is
+
+
+Spread = tuple[float, float]  # blur and foot of a step [points]
 
 
 @dataclass(frozen=True, slots=True)
@@ -48,7 +53,7 @@ class _Step:
     """Parabolas on both sides of a blurred step."""
 
     at: float
-    blur: float
+    spread: Spread
     solution: Array  # inner 1, x, x²; then what the outer one differs by, about `at`
     covariance: Array
     misfit: float  # mean squared, over that expected
@@ -120,15 +125,74 @@ def _cut(profile: Profile, start: float, end: float) -> Profile:
 
 
 def _edge(window: Profile, about: float, reach: float) -> Edge:
-    step, place_u = _best_step(window, about, reach)
-    jump, jump_u = float(step.solution[3]), float(np.sqrt(step.covariance[3, 3]))
-    inner = float(step.solution[0])
-    crossing = _crossing(step, reach)
-    if jump > SURE * jump_u and inner < 0 and inner + jump > -PARTIAL * jump:
-        slope = jump / (step.blur * np.sqrt(2 * np.pi)) + abs(float(step.solution[1]))
-        doubt = 0.5 * abs(step.at - crossing.at) if jump < 2 * SURE * jump_u else 0.0  # noise may feign a weak step
-        return Edge(step.at, float(np.sqrt(place_u**2 + FLOOR**2 + doubt**2)), slope, True, step.misfit)
-    return replace(crossing, u=float(np.hypot(crossing.u, min(place_u, UNRESOLVED))))
+    """Return where the profile, freed of its blur, meets the surround: the mean over all likely steps, feet and blurs.
+
+    A foot inside and a blur to both sides widen a step nearly alike and place its crossing differently: what one profile
+    cannot tell of them is averaged over, and so is in the uncertainty.
+    """
+    places = about + np.arange(-reach, reach + 0.01, 0.25)
+    places = places[(places > window.x[0] + 1) & (places < window.x[-1] - 1)]
+    spreads: list[Spread] = [(blur, foot) for blur in BLURS for foot in FEET]
+    for least in (0.6, 0.12, 0.0):
+        fits = [_fits(window, places, spread) for spread in spreads]
+        misfits = np.array([misfit for misfit, _ in fits])
+        usual = max(float(misfits.min()) / max(window.x.size - 9, 1), 1.0)
+        share = np.exp(-0.5 * (misfits - misfits.min()) / usual)
+        mean, sd = _mean(np.broadcast_to(places, share.shape), share)
+        if sd > 2 * (places[1] - places[0]) or not least:
+            break
+        spreads = [one for one, likely in zip(spreads, share.max(axis=1) > 1e-8, strict=True) if likely]
+        places = mean + np.linspace(-1, 1, 41) * max(5 * sd, least)
+    crossings = np.array([places + _crossings(one, spread[1], reach) for (_, one), spread in zip(fits, spreads, strict=True)])
+    at, u = _mean(crossings, share)
+    first, second = np.unravel_index(int(np.argmin(misfits)), misfits.shape)
+    best = _step(window, float(places[second]), spreads[int(first)])
+    slope, own_u = _slope(best, float(crossings[first, second]) - best.at)
+    return Edge(at, float(np.sqrt(u**2 + own_u**2 + FLOOR**2)), slope, own_u == 0, best.misfit)
+
+
+def _mean(values: Array, share: Array) -> tuple[float, float]:
+    mean = float(np.average(values, weights=share))
+    return mean, float(np.sqrt(np.average((values - mean) ** 2, weights=share)))
+
+
+def _curve(x: Array, foot: float) -> Array:
+    """Return the terms of `_basis` without the blur: (n, 6)."""
+    out = np.where(x >= 0, x, 0.0)
+    step = np.exp(np.minimum(x, 0.0) / foot) if foot else np.where(x >= 0, 1.0, 0.0)
+    return np.stack([np.ones_like(x), x, x * x, step, out, out * out], axis=-1)
+
+
+def _crossings(solutions: Array, foot: float, reach: float) -> Array:
+    """Return how far from the upper end of each step its profile first rises to the surround.
+
+    Where the upper end lies at the surround but for noise, the removed area ends with it.
+    """
+    x = np.append(np.arange(-reach, 0.0, 0.05), [-1e-6, *np.arange(0.0, reach, 0.1)])
+    h = solutions @ _curve(x, foot).T
+    inside = int(np.count_nonzero(x < 0))
+    begun = np.maximum.accumulate(h < 0, axis=1)
+    risen = (h >= 0) & begun
+    at = np.where(risen.any(axis=1), np.argmax(risen, axis=1), h.shape[1] - 1)
+    before = np.maximum(at - 1, 0)
+    every = np.arange(h.shape[0])
+    low, high = h[every, before], h[every, at]
+    share = np.clip(-low / np.where(high > low, high - low, 1.0), 0, 1)
+    crossing = x[before] + share * (x[at] - x[before])
+    top, jump = solutions[:, 0] + solutions[:, 3], solutions[:, 3]
+    ended = (at >= inside) & (top > -PARTIAL * np.abs(jump))
+    return np.asarray(np.where(ended, 0.0, crossing))
+
+
+def _slope(best: _Step, at: float) -> tuple[float, float]:
+    """Return the profile's slope at its crossing, and how far noise moves the crossing while the step stands still."""
+    blur, foot = best.spread
+    jump = max(float(best.solution[3]), 0.0)
+    terms, near = _curve(np.array([at]), foot)[0], _curve(np.array([at - 0.02, at]), foot) @ best.solution
+    slope = max(float(near[1] - near[0]) / 0.02, 1e-300)
+    if abs(at) < 1e-5:
+        return max(jump / (blur * np.sqrt(2 * np.pi) + foot) + float(best.solution[1]), 1e-300), 0.0
+    return slope, min(float(np.sqrt(terms @ best.covariance @ terms)) / slope, 3.0)
 
 
 def ring_means(distance: Array, height: Array, ends: tuple[float, float], noise: float) -> Profile:
@@ -172,39 +236,25 @@ def _rough_crossing(profile: Profile) -> float:
     return float(profile.x[-1])
 
 
-def _basis(x: Array, blur: float) -> Array:
-    """Return 1, x, x² and the same begun at 0, blurred by a Gaussian, along a last axis of 6."""
+def _basis(x: Array, spread: Spread) -> Array:
+    """Return 1, x, x², the step, and x, x² begun at 0, blurred by a Gaussian, along a last axis of 6.
+
+    The step reaches its full height at 0, its foot falls as exp(x / foot) inside: blurred, an exponentially modified
+    Gaussian (Grushka 1972, Anal. Chem. 44, 1733, from memory).
+    """
+    blur, foot = spread
     rise, bell = ndtr(x / blur), np.exp(-0.5 * (x / blur) ** 2) / np.sqrt(2 * np.pi)
     line = x * rise + blur * bell
     square = (x * x + blur**2) * rise + blur * x * bell
-    return np.stack([np.ones_like(x), x, x * x + blur**2, rise, line, square], axis=-1)
+    step = rise
+    if foot:
+        step = rise + np.exp(x / foot + 0.5 * (blur / foot) ** 2 + log_ndtr(-x / blur - blur / foot))
+    return np.stack([np.ones_like(x), x, x * x + blur**2, step, line, square], axis=-1)
 
 
-def _best_step(window: Profile, about: float, reach: float) -> tuple[_Step, float]:
-    """Return the likeliest place and blur of a step, and the standard uncertainty of the place."""
-    places = about + np.arange(-reach, reach + 0.01, 0.25)
-    places = places[(places > window.x[0] + 1) & (places < window.x[-1] - 1)]
-    misfits = np.array([_misfits(window, places, blur) for blur in BLURS])
-    blur = BLURS[int(np.argmin(misfits.min(axis=1)))]
-    about = float(places[int(np.argmin(misfits.min(axis=0)))])
-    places = about + np.arange(-0.3, 0.31, 0.02)
-    misfit = _misfits(window, places, blur)
-    at = float(places[int(np.argmin(misfit))])
-    best = _step(window, at, blur)
-    # The uncertainty: how far the place moves until the misfit has grown by that of one standard uncertainty.
-    usual = max(best.misfit, 1.0)
-    distances = np.array([0.05, 0.1, 0.2, 0.4, 0.8, 1.6, 3.2])
-    sides = np.array([_misfits(window, at + np.append(-distances, distances), one) for one in BLURS]).min(axis=0)
-    growth = sides.reshape(2, -1) - misfit.min()
-    for distance, both in zip(distances, growth.T, strict=True):
-        if both.min() > usual:
-            return best, float(distance * np.sqrt(usual / both.mean()))
-    return best, reach
-
-
-def _misfits(window: Profile, places: Array, blur: float) -> Array:
-    """Return the sum of squared misfits of a step at each of several places."""
-    design = _basis(window.x[None, :] - places[:, None], blur) / window.sd[:, None]
+def _fits(window: Profile, places: Array, spread: Spread) -> tuple[Array, Array]:
+    """Return the sum of squared misfits of a step at each of several places, and its terms: (n,), (n, 6)."""
+    design = _basis(window.x[None, :] - places[:, None], spread) / window.sd[:, None]
     target = window.h / window.sd
     scale = np.sqrt(np.sum(design**2, axis=1)) + 1e-300
     design = design / scale[:, None, :]
@@ -212,32 +262,14 @@ def _misfits(window: Profile, places: Array, blur: float) -> Array:
     right = np.swapaxes(design, 1, 2) @ target
     solution = np.linalg.solve(normal, right[..., None])[..., 0]
     residual = target - np.einsum("mnk,mk->mn", design, solution)
-    return np.asarray(np.sum(residual**2, axis=1))
+    return np.asarray(np.sum(residual**2, axis=1)), np.asarray(solution / scale)
 
 
-def _step(window: Profile, at: float, blur: float) -> _Step:
-    design = _basis(window.x - at, blur) / window.sd[:, None]
+def _step(window: Profile, at: float, spread: Spread) -> _Step:
+    design = _basis(window.x - at, spread) / window.sd[:, None]
     target = window.h / window.sd
     scale = np.sqrt(np.sum(design**2, axis=0)) + 1e-300
     inverse = np.linalg.inv((design / scale).T @ (design / scale) + RIDGE * np.eye(scale.size)) / np.outer(scale, scale)
     solution = inverse @ (design.T @ target)
     misfit = float(np.sum((target - design @ solution) ** 2)) / max(target.size - 8, 1)
-    return _Step(at, blur, solution, inverse * max(misfit, 1.0), misfit)
-
-
-def _crossing(step: _Step, reach: float) -> Edge:
-    """Return where the parabola on the inner side of the weak step, or of the bend, meets the surround."""
-    solution, covariance = step.solution[:3], step.covariance[:3, :3]
-    roots = np.roots(solution[::-1])
-    real = roots[np.abs(roots.imag) < 1e-9].real
-    rising = [root for root in real if solution[1] + 2 * solution[2] * root > 0 and abs(root) <= reach]
-    if rising:
-        at = float(min(rising, key=abs))
-    elif solution[1] > 0:
-        at = float(np.clip(-solution[0] / solution[1], -reach, reach))
-    else:
-        at = 0.0
-    slope = max(float(solution[1] + 2 * solution[2] * at), 1e-300)
-    terms = np.array([1.0, at, at * at])
-    u = float(np.sqrt(terms @ covariance @ terms)) / slope
-    return Edge(step.at + at, float(np.hypot(min(u, reach), FLOOR)), slope, False, step.misfit)
+    return _Step(at, spread, solution, inverse * max(misfit, 1.0), misfit)
