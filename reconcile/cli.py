@@ -13,13 +13,15 @@ import unicodedata
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 from pathlib import Path
-from typing import TYPE_CHECKING, Any, NoReturn
+from typing import TYPE_CHECKING, Any, NoReturn, TypeVar
 
 from reconcile import __version__
 from reconcile.campaign.refusal import Refusal, nearest
 
 if TYPE_CHECKING:
     from types import TracebackType
+
+_Parsed = TypeVar("_Parsed")
 
 DONE, REFUSED, USAGE, PROVISIONAL, INTERRUPTED = 0, 1, 2, 3, 130
 
@@ -175,6 +177,25 @@ def _measured_folder(name: str) -> Path:
     return folder.with_name(f"{name}-measured") if (folder / "results.json").exists() else folder
 
 
+def verb_predict(args: argparse.Namespace) -> int:
+    """Say what the model expects of shots not yet fired."""
+    _one_thread_each()
+    import numpy as np
+
+    from reconcile.predict import predict_shots
+    from reconcile.report.prediction import prediction_lines
+
+    energies = np.array([args.energy] if args.energies is None else args.energies)
+    predicted = predict_shots(args.campaign, energies, pulses=args.pulses, out=args.out, seed=args.seed)
+    _say(
+        *prediction_lines(predicted.prediction),
+        "",
+        *(f"note: {note}" for note in predicted.notes),
+        *(f"written: {path.as_posix()}" for path in predicted.files),
+    )
+    return DONE
+
+
 def verb_example(args: argparse.Namespace) -> int:
     """Write the invented example campaign into a new folder."""
     from reconcile.example import write_example
@@ -234,6 +255,22 @@ def _closeout_options(parser: argparse.ArgumentParser) -> None:
     )
 
 
+def _predict_options(parser: argparse.ArgumentParser) -> None:
+    which = parser.add_mutually_exclusive_group(required=True)
+    which.add_argument(
+        "--energy", metavar="Q", type=_energy, help='logged energy of one pulse, with its unit, such as "20 uJ"'
+    )
+    which.add_argument(
+        "--energies",
+        metavar="FROM:TO:STEPS",
+        type=_energies,
+        help='so many energies, evenly spaced, both ends among them, such as "5 uJ:50 uJ:10"',
+    )
+    parser.add_argument(
+        "--pulses", metavar="N", type=_whole(1), default=1, help="pulses that one place receives (default: 1)"
+    )
+
+
 CAMPAIGN_HELP = "a folder that holds campaign.toml, or that file"
 
 VERBS: dict[str, Verb] = {
@@ -246,6 +283,9 @@ VERBS: dict[str, Verb] = {
     ),
     "measure": Verb(
         verb_measure, "read and measure only; say what was read, what was refused and why", "CAMPAIGN", CAMPAIGN_HELP
+    ),
+    "predict": Verb(
+        verb_predict, "say what the model expects of a shot not yet fired", "CAMPAIGN", CAMPAIGN_HELP, _predict_options
     ),
     "verify": Verb(
         verb_verify, "say what changed in a close-out since it was written", "REPORT_DIR", "the folder of a close-out"
@@ -269,6 +309,26 @@ def _whole(least: int) -> Callable[[str], int]:
         return number
 
     return whole
+
+
+def _energy(text: str) -> float:
+    from reconcile.campaign.energies import parse_energy
+
+    return _as_usage(lambda: parse_energy(text, "--energy"))
+
+
+def _energies(text: str) -> tuple[float, ...]:
+    from reconcile.campaign.energies import parse_energies
+
+    return _as_usage(lambda: parse_energies(text, "--energies"))
+
+
+def _as_usage(parse: Callable[[], _Parsed]) -> _Parsed:
+    """Make of a refused word of the command line wrong usage."""
+    try:
+        return parse()
+    except Refusal as refusal:
+        raise argparse.ArgumentTypeError(refusal.reason) from None
 
 
 def _kind(text: str) -> str:

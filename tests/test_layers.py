@@ -20,7 +20,8 @@ LAYERS = (
     {"inference"},
     {"report"},
     {"invent"},
-    {"closeout", "example"},
+    {"closeout", "example", "predict"},
+    {"notebook"},
     {"cli"},
     {"__main__"},
 )

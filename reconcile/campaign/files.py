@@ -15,6 +15,7 @@ from typing import Literal
 from reconcile.campaign.refusal import Place, Refusal
 
 CHECKSUMS = "checksums.sha256"
+INPUT_CHECKSUMS = "inputs.sha256"
 # What file managers drop into folders that a person looks at; nobody's work.
 _LITTER = frozenset({".DS_Store", "Thumbs.db", "desktop.ini"})
 _LINE = re.compile(r"(\\?)([0-9a-fA-F]{64}) [ *](.+)")
@@ -81,6 +82,24 @@ def verify(folder: Path) -> list[Changed]:
     return sorted(changed, key=lambda one: one.path)
 
 
+def changed_inputs(folder: Path, campaign_folder: Path) -> list[Changed]:
+    """Return the input files of a close-out that changed or are missing since it read them, sorted by path.
+
+    Raises
+    ------
+    Refusal
+        The folder holds no inputs.sha256, or one that is none.
+    """
+    changed = []
+    for name, written in _written(Path(folder), INPUT_CHECKSUMS).items():
+        path = Path(campaign_folder) / name
+        if not path.is_file():
+            changed.append(Changed(name, "missing"))
+        elif sha256_of(path) != written.lower():
+            changed.append(Changed(name, "changed"))
+    return sorted(changed, key=lambda one: one.path)
+
+
 def _names(folder: Path) -> list[str]:
     """Return every file below a folder, relative to it; a link counts as a file."""
     names = []
@@ -92,14 +111,14 @@ def _names(folder: Path) -> list[str]:
     return sorted(names)
 
 
-def _written(folder: Path) -> dict[str, str]:
-    path = folder / CHECKSUMS
+def _written(folder: Path, listed: str = CHECKSUMS) -> dict[str, str]:
+    path = folder / listed
     try:
         lines = path.read_text(encoding="utf-8").removesuffix("\n").split("\n")
     except (OSError, UnicodeDecodeError):
         raise Refusal(
             folder.as_posix(),
-            found=f"no readable {CHECKSUMS}",
+            found=f"no readable {listed}",
             expected="the folder that a close-out wrote",
             remedy="Give that folder.",
         ) from None
@@ -138,7 +157,7 @@ def check_output(path: Path, campaign_folder: Path | None = None) -> None:
     """
     path = Path(path)
     if campaign_folder is not None:
-        _keep_apart(path, campaign_folder)
+        keep_apart(path, campaign_folder)
     if path.exists() and not path.is_dir():
         raise Refusal(
             path.as_posix(), found="a file", expected="a folder, or a name that is free", remedy="Choose another --out."
@@ -166,7 +185,8 @@ def check_output(path: Path, campaign_folder: Path | None = None) -> None:
 _IS = {"changed": "changed since", "missing": "missing", "extra": "added since"}
 
 
-def _keep_apart(path: Path, campaign_folder: Path) -> None:
+def keep_apart(path: Path, campaign_folder: Path) -> None:
+    """Refuse an output folder that lies in the campaign folder or holds it."""
     out, campaign = path.resolve(), campaign_folder.resolve()
     if out.is_relative_to(campaign) or campaign.is_relative_to(out):
         inside = "inside" if out.is_relative_to(campaign) else "around"
