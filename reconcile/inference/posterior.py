@@ -22,6 +22,9 @@ _LEANING = ("absorbed_fraction", "coupling")
 
 def summary(draws: Array) -> Summary:
     """Seven numbers of draws (n,)."""
+    if draws.min() == draws.max():  # fixed: sums of many equal numbers would round
+        value = float(draws[0])
+        return Summary(value, 0.0, value, value, value, value, value)
     q025, q16, median, q84, q975 = (float(q) for q in np.quantile(draws, [0.025, 0.16, 0.5, 0.84, 0.975]))
     return Summary(float(draws.mean()), float(draws.std()), q025, q16, median, q84, q975)
 

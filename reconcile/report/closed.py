@@ -27,9 +27,9 @@ class Closed:
     def fixed(self) -> dict[str, float]:
         """Values of the inputs that were held, SI."""
         return {
-            name: float(numbers["mean"])
+            name: float(numbers["median"])
             for name, numbers in self.results["inputs"].items()
-            if numbers["sd"] == 0 and numbers["mean"] is not None and name not in self.posterior.names
+            if name not in self.posterior.names and numbers["median"] is not None
         }
 
 
