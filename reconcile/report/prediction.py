@@ -20,6 +20,7 @@ COLUMNS = ("energy_J", "pulses", "quantity", "unit", "median", "q16", "q84", "q0
 # A figure's first line: how a later run knows it for its own.
 _FIRST_OF_FIGURE = '<?xml version="1.0" encoding="utf-8" standalone="no"?><!-- reconcile prediction, contract 1 -->'
 _ACROSS = 3  # panels
+_WIDE, _WIDEST = 20.0, 1000.0  # ratio of the highest to the lowest bound between which an axis is logarithmic
 
 
 def rows(prediction: Prediction, source: str) -> list[tuple[float | int | str | None, ...]]:
@@ -148,7 +149,7 @@ def _figure(prediction: Prediction, title: str) -> str:
 
 
 def _panel(axes: Axes, one: Range, energies: np.ndarray) -> None:
-    from reconcile.report.style import BLACK, BLUE, SKY
+    from reconcile.report.style import BLACK, BLUE, SKY, readable_ticks
 
     energy, scale = lines.scale_for("J", energies.tolist()), _scale(one, None)
     x = energies / energy.size
@@ -158,8 +159,10 @@ def _panel(axes: Axes, one: Range, energies: np.ndarray) -> None:
         bottom, top = (np.broadcast_to(bound / scale.size, x.shape) for bound in (low, high))
         axes.fill_between(x, bottom, top, color=SKY, alpha=alpha, linewidth=0, label=words)
     axes.plot(x, np.broadcast_to(one.median / scale.size, x.shape), color=BLUE, label="median")
-    wide = np.nanmin(one.q025) > 0 and np.nanmax(one.q975) > 20 * np.nanmin(one.q025)
-    axes.set_yscale("log" if wide else "linear")
+    ratio = float(np.nanmax(one.q975) / np.nanmin(one.q025)) if np.nanmin(one.q025) > 0 else np.inf
+    if _WIDE < ratio < _WIDEST:  # beyond that the lower bound is as good as none
+        axes.set_yscale("log")
+        readable_ticks(axes.yaxis, ratio)
     axes.set_title(scale.heading(one.words.replace(" of a sample", "\nof a sample")), fontsize=7.5, color=BLACK)
     axes.set_xlabel(energy.heading("logged energy"))
     if len(energies) == 1:
