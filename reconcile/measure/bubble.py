@@ -179,7 +179,7 @@ def _empty(contact: Contact, pitch: float, side: Side, shape: tuple[int, ...]) -
             "a dark bubble, or nothing",
             "Look at the frame.",
         )
-    outline = Outline((_edge_stroke(scene, side, shape),), f"no bubble; below {limit * pitch * 1e6:.3g} um")
+    outline = Outline((_edge_stroke(scene, side, shape),), f"no bubble; below {limit * pitch * 1e6:.3g} µm")
     return Finding((Measured("bubble-radius", None, None, limit=limit * pitch),), outline)
 
 
@@ -195,7 +195,7 @@ def _finding(contact: Contact, arc: Arc, pitch: float, side: Side, shape: tuple[
     if (~arc.used).any():
         strokes.append(Stroke(_back(arc.points[~arc.used], side, shape), "left-out", marks=True))
     value, u = arc.radius * pitch, arc.u * pitch
-    caption = f"bubble radius {value * 1e6:.5g} um ± {u * 1e6:.2g} um, arc {arc.coverage:.0f}°, blur {arc.width:.1f} px"
+    caption = f"bubble radius {value * 1e6:.5g} µm ± {u * 1e6:.2g} µm, arc {arc.coverage:.0f}°, blur {arc.width:.1f} px"
     measured = [Measured("bubble-radius", value, u)]
     site = np.array([arc.centre[0], float(scene.row_of_edge(arc.centre[0]))])
     inner = 1.1 * arc.radius + 4.0 * arc.width + 8.0  # clear of the bubble's own fringes
@@ -203,7 +203,7 @@ def _finding(contact: Contact, arc: Arc, pitch: float, side: Side, shape: tuple[
     if ring is not None:
         measured.append(Measured("shock-radius", ring[0] * pitch, ring[1] * pitch))
         strokes.append(Stroke(_back(_above(scene, site, ring[0]), side, shape), "found"))
-        caption += f"; shock radius {ring[0] * pitch * 1e6:.4g} um"
+        caption += f"; shock radius {ring[0] * pitch * 1e6:.4g} µm"
     return Finding(tuple(measured), Outline(tuple(strokes), caption), remarks)
 
 

@@ -278,7 +278,9 @@ def _finding(surface: Levelled, crater: _Crater, pixel_pitch: float) -> Finding:
         measured += [Measured("crater-diameter", diameter, diameter_u), _volume(surface, crater, level_u, pixel_pitch)]
     else:
         remarks += ("the edge of the crater is lost in the noise: its diameter and volume were not taken",)
-    caption = f"depth {1e6 * depth:.4g} µm, diameter {1e6 * diameter:.4g} µm"
+    caption = f"depth {_micrometres(depth, depth_u)}"
+    if len(measured) > 1:
+        caption += f", diameter {_micrometres(diameter, diameter_u)}"
     strokes = (
         Stroke(shape.line(edge.at), "found"),
         Stroke(shape.line(BOTTOM * edge.at), "reference"),
@@ -287,12 +289,23 @@ def _finding(surface: Levelled, crater: _Crater, pixel_pitch: float) -> Finding:
     return Finding(tuple(measured), Outline(tuple(one for one in strokes if len(one.points)), caption), remarks)
 
 
+def _micrometres(value: float, u: float) -> str:
+    """Return "40.57 µm ± 0.12 µm": as many decimals as show two digits of the uncertainty."""
+    decimals = max(1 - int(np.floor(np.log10(1e6 * u))), 0) if u > 0 else 4
+    return f"{1e6 * value:.{decimals}f} µm ± {1e6 * u:.{decimals}f} µm"
+
+
 def _volume(surface: Levelled, crater: _Crater, level_u: float, pixel_pitch: float) -> Measured:
     """Return the volume below the surround: the area times the mean depth of its points."""
     known, edge, radius = np.isfinite(surface.height), crater.edge, crater.edge.at * crater.shape.area_radius
     area = np.pi * radius**2
     # Points on the edge count by the share of them that lies inside; what they mix of both sides is in the uncertainty.
-    share = np.clip(0.5 + (edge.at - crater.distance[known]) * crater.shape.area_radius, 0, 1)
+    # Points are missing more often where it is steep: each stands for those missing in its ring.
+    share = np.clip(0.5 + (edge.at - crater.distance) * crater.shape.area_radius, 0, 1)
+    ring = (crater.distance * crater.shape.area_radius).astype(int)
+    there = np.bincount(ring[known], share[known], minlength=int(ring.max()) + 1)
+    ratio = np.bincount(ring.ravel(), share.ravel()) / np.where(there > 0, there, 1.0)
+    share = share[known] * ratio[ring[known]]
     volume = -float(np.average(surface.height[known], weights=share)) * area * pixel_pitch**2
     point_u = surface.noise * np.sqrt(surface.together / float(share.sum()))
     mixed_u = 2 * np.pi * radius * edge.slope / 6

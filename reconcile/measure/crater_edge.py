@@ -11,10 +11,10 @@ from reconcile.measure.levelling import Array
 from reconcile.measure.measured import Unmeasurable
 
 BIN = 0.25  # points
-BLURS = (0.3, 0.45, 0.7, 1.0, 1.5)  # points; standard deviations by which instrument and averaging widen a step
+# Points; standard deviations by which instrument and averaging widen a step.
+BLURS = (0.3, 0.4, 0.55, 0.75, 1.0, 1.4)
 # Points; lengths over which a step's foot falls inside its upper edge, as a depth reached soon after threshold has it.
 FEET = (0.0, 0.35, 0.5, 0.7, 1.0, 1.4, 2.0, 2.8)
-SURE = 5.0  # standard uncertainties by which a step must stand out
 WINDOW = 0.2  # of the radius, on either side of the edge
 LEAST_WINDOW = 4.0  # points
 OUTER = (0.35, 0.7)  # of twice that, outside
@@ -22,6 +22,8 @@ RIDGE = 1e-9  # of the scaled normal equations: a step at the window's end has n
 UNRESOLVED = 0.15  # points: how far a step too low to be told apart from the slope beside it moves the crossing
 VAGUE = 1.0  # points: an edge without a step less sure than this is taken from the whole outer half of the profile
 PARTIAL = 0.25  # of a step: how far below the surround its upper end may seem to lie
+FORM = 0.1  # of how far a foot moves the crossing: the least that the choice of the profile's form leaves open
+ALIKE = 1.5  # ratio of two windows' misfits up to which they fit equally well
 FLOOR = 0.008  # points: what the raster leaves of a step's place however little noise there is
 
 
@@ -78,14 +80,16 @@ def find_edge(distance: Array, height: Array, radius: float, noise: float, toget
     Returns
     -------
     Edge
-        At a step where the profile has one that ends at or above the surround, else where the profile reaches the surround.
+        Where the profile, freed of its blur, reaches the surround.
     """
     profile = ring_means(distance, height, (-0.6 * radius, max(0.8 * radius, 8.0)), noise * np.sqrt(together))
     about = _rough_crossing(profile)
     inner, outer = max(LEAST_WINDOW, WINDOW * radius), max(LEAST_WINDOW, 2 * WINDOW * radius)
     edges = [_edge(_cut(profile, about - inner, about + share * outer), about, 0.6 * inner) for share in OUTER]
     # Rims fall off over lengths of their own: two windows outside tell how much the edge depends on that.
-    best, other = sorted(edges, key=lambda one: one.misfit)
+    # The better fitted one is taken; of two fitted alike, the surer one.
+    least = min(one.misfit for one in edges)
+    best, other = sorted(edges, key=lambda one: (one.misfit > ALIKE * least, one.u))
     if not best.step and best.u > VAGUE:
         # A step too low to be seen would lie inside the extrapolated crossing: the truth is between the two.
         wide = _extrapolated(profile, about, -radius)
@@ -125,30 +129,38 @@ def _cut(profile: Profile, start: float, end: float) -> Profile:
 
 
 def _edge(window: Profile, about: float, reach: float) -> Edge:
-    """Return where the profile, freed of its blur, meets the surround: the mean over all likely steps, feet and blurs.
+    """Return where the profile, freed of its blur, meets the surround: the mean over all likely steps.
 
-    A foot inside and a blur to both sides widen a step nearly alike and place its crossing differently: what one profile
-    cannot tell of them is averaged over, and so is in the uncertainty.
+    A foot inside and a blur to both sides widen a step nearly alike and place its crossing differently: what one
+    profile cannot tell of them is averaged over, and so is in the uncertainty.
     """
     places = about + np.arange(-reach, reach + 0.01, 0.25)
     places = places[(places > window.x[0] + 1) & (places < window.x[-1] - 1)]
     spreads: list[Spread] = [(blur, foot) for blur in BLURS for foot in FEET]
+    upright = float("nan")
     for least in (0.6, 0.12, 0.0):
         fits = [_fits(window, places, spread) for spread in spreads]
         misfits = np.array([misfit for misfit, _ in fits])
         usual = max(float(misfits.min()) / max(window.x.size - 9, 1), 1.0)
+        crossings = np.array(
+            [places + _crossings(one, spread[1], reach) for (_, one), spread in zip(fits, spreads, strict=True)]
+        )
         share = np.exp(-0.5 * (misfits - misfits.min()) / usual)
+        if np.isnan(upright):
+            without = np.array([not foot for _, foot in spreads])
+            own = misfits[without]
+            upright, _ = _mean(crossings[without], np.exp(-0.5 * (own - own.min()) / usual))
         mean, sd = _mean(np.broadcast_to(places, share.shape), share)
         if sd > 2 * (places[1] - places[0]) or not least:
             break
         spreads = [one for one, likely in zip(spreads, share.max(axis=1) > 1e-8, strict=True) if likely]
         places = mean + np.linspace(-1, 1, 41) * max(5 * sd, least)
-    crossings = np.array([places + _crossings(one, spread[1], reach) for (_, one), spread in zip(fits, spreads, strict=True)])
     at, u = _mean(crossings, share)
     first, second = np.unravel_index(int(np.argmin(misfits)), misfits.shape)
     best = _step(window, float(places[second]), spreads[int(first)])
     slope, own_u = _slope(best, float(crossings[first, second]) - best.at)
-    return Edge(at, float(np.sqrt(u**2 + own_u**2 + FLOOR**2)), slope, own_u == 0, best.misfit)
+    form_u = FORM * (at - upright)
+    return Edge(at, float(np.sqrt(u**2 + own_u**2 + form_u**2 + FLOOR**2)), slope, own_u == 0, best.misfit)
 
 
 def _mean(values: Array, share: Array) -> tuple[float, float]:

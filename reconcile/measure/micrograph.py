@@ -81,13 +81,12 @@ def measure_micrograph(frame: Array, pixel_pitch: float) -> Particles:
             f"{np.count_nonzero(cluster)} in clusters that cannot be told apart"
         )
     diameters = 2 * radius[kept] * pixel_pitch
-    median = 1e9 * float(np.median(diameters))
     strokes = tuple(
         Stroke(rims.line(index), "found" if kept[index] else "left-out")
         for index in range(whole.size)
         if kept[index] or rims.free[index].any()
     )
-    caption = f"{diameters.size} whole particles, median {median:.3g} nm"
+    caption = f"{diameters.size} whole particles, median {_median(diameters)}"
     remarks = _remarks(whole & cluster, whole & small & ~cluster, int(kept.sum()))
     remarks += _domed(rims.shoulder[kept] - flat_shoulder(radius[kept], blur))
     return Particles(diameters, _weights(rims, frame.shape)[kept], Outline(strokes, caption), remarks)
@@ -114,6 +113,20 @@ def _extent(rims: Rims) -> tuple[Array, Array, Array, Array]:
         rims.column + across.min(axis=1),
         rims.column + across.max(axis=1),
     )
+
+
+def _median(diameters: Array) -> str:
+    """Return the median with the standard uncertainty that the number of particles leaves it.
+
+    That of a lognormal population's: √(π/2) of the mean's of the logarithm.
+    """
+    spread = 1.4826 * float(np.median(np.abs(np.log(diameters / np.median(diameters)))))
+    median = 1e9 * float(np.median(diameters))
+    u = median * spread * float(np.sqrt(0.5 * np.pi / diameters.size))
+    if u == 0:
+        return f"{median:.3g} nm"
+    decimals = max(1 - int(np.floor(np.log10(u))), 0)
+    return f"{median:.{decimals}f} nm ± {u:.{decimals}f} nm"
 
 
 def _weights(rims: Rims, shape: tuple[int, ...]) -> Array:
