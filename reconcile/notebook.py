@@ -44,7 +44,7 @@ class OpenCampaign:
     """
 
     def __init__(self, folder: str | Path, out: str | Path | None = None) -> None:
-        self.path = Path(folder)
+        self.path = Path(folder).absolute()  # it stays the same wherever Python goes
         self.name = load(self.path).name
         self.out = out_folder(self.name, None if out is None else Path(out)).absolute()
 

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from decimal import Decimal
+
 from reconcile.campaign.number_text import to_float
 from reconcile.campaign.quantity import parse_quantity
 from reconcile.campaign.refusal import Refusal
@@ -40,7 +42,8 @@ def parse_energies(text: str, place: str) -> tuple[float, ...]:
     low = parse_energy(_with_unit(parts[0], parts[1]), place)
     if not low < high:
         raise Refusal(place, found=f"'{text}'", expected="FROM below TO", remedy="Turn them round.")
-    return tuple(low + (high - low) * number / (steps - 1) for number in range(steps - 1)) + (high,)
+    first, last = Decimal(repr(low)), Decimal(repr(high))  # so that 20 uJ comes out as 2e-05 J and not its neighbour
+    return tuple(float(first + (last - first) * number / (steps - 1)) for number in range(steps))
 
 
 def _with_unit(low: str, high: str) -> str:
