@@ -107,7 +107,7 @@ def collapse_time(
     -----
     Rayleigh's time with corrections for sound, viscosity, gas and surface tension, fitted to Keller-Miksis
     collapses: within 0.063 % for radii of 25 µm to 2 mm, surface tensions of 0.03 to 0.075 N/m, viscosities of 0.5 to
-    3 mPa s, gas up to 0.032.
+    3 mPa s, gas up to 0.02; 0.08 % for gas up to 0.032.
 
     """
     speed = np.sqrt(overpressure / fluid.density)

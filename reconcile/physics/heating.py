@@ -20,8 +20,8 @@ def heated_depth(fluence: Values, depth_at_1kJ: Values, exponent: Values) -> Arr
 
     Notes
     -----
-    A power law fitted to two-temperature solutions, within 5 % from 0.5 to 5 kJ/m² for any one choice of
-    electron transport. It is not the 1/e depth of the temperature profile, which is up to 1.45 times shallower.
+    A power law fitted to two-temperature solutions, within 7 % from 0.5 to 5 kJ/m² for any one choice of
+    electron transport (`solvers.heated_depths`). It is not the 1/e depth of the temperature profile, which is up to 1.45 times shallower.
 
     """
     return depth_at_1kJ * (fluence / REFERENCE_FLUENCE) ** exponent
