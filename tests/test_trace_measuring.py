@@ -38,6 +38,7 @@ def drawn(number: int) -> tuple[Bench, np.random.Generator]:
         hum=float(rng.uniform(0, 4e-3)),
         hum_frequency=float(rng.uniform(20e3, 400e3)),
         trigger=float(rng.normal(0, 20e-9)),
+        slower=float(np.exp(rng.normal(0, 0.15))),
     ), rng
 
 

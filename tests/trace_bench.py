@@ -39,7 +39,8 @@ class Bench:
     standoff: float = 5e-3
     sound_speed: float = 1482.0
     trigger: float = 30e-9
-    response: float = 5.3e-9
+    response: float = 5.3e-9  # as stated
+    slower: float = 1.0  # true response time over the stated one
 
     @property
     def setup(self) -> ProbeSetup:
@@ -57,7 +58,7 @@ class Truth:
 def pulse(bench: Bench, duration: float, form: str, time, at: float):
     """Return one pulse of unit height as the probe gives it, its integral of the square, and its peak."""
     lead = 10  # samples ahead of the jump, for the smear
-    count = int(np.ceil(14 * (duration + bench.response) / bench.interval)) + lead
+    count = int(np.ceil(14 * (duration + bench.slower * bench.response) / bench.interval)) + lead
     first = int(np.floor((at - time[0]) / bench.interval)) - lead
     fine = bench.interval / FINE
     t = time[0] + first * bench.interval + (np.arange(count * FINE) + 0.5) * fine - at
@@ -68,7 +69,7 @@ def pulse(bench: Bench, duration: float, form: str, time, at: float):
     pressure = np.where(t >= 0, shapes[form](), 0.0)
     if bench.smear:
         pressure = gaussian_filter1d(pressure, bench.smear / fine, mode="constant")
-    keep = np.exp(-fine / bench.response)
+    keep = np.exp(-fine / (bench.slower * bench.response))
     voltage = lfilter([1 - keep], [1, -keep], pressure)
     out = np.zeros(time.size)
     index = first + np.arange(1, count)

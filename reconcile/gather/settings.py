@@ -12,7 +12,7 @@ from reconcile.campaign.refusal import Place, Refusal
 from reconcile.gather.collected import Collected, spreadsheets
 from reconcile.gather.measuring import Settings, read_background
 from reconcile.measure.bubble import Side
-from reconcile.measure.trace import ProbeSetup
+from reconcile.measure.trace import RESPONSE_SPREAD, ProbeSetup
 from reconcile.read.traces import TraceSettings
 
 DEFAULT_EDGE: Side = "bottom"
@@ -143,10 +143,12 @@ def _probe(campaign: Campaign, table: Table) -> ProbeSetup:
             expected=f"[probe] with {', '.join(needed)}",
             remedy=f"Add {' and '.join(missing)} to [probe].",
         )
+    bandwidth = needed["bandwidth"]
     return ProbeSetup(
         sensitivity=needed["sensitivity"].value,
         standoff=needed["standoff"].value,
         sound_speed=liquid.sound_speed,
         trigger_offset=needed["trigger_offset"].value,
-        response_time=1.0 / (2.0 * math.pi * needed["bandwidth"].value),
+        response_time=1.0 / (2.0 * math.pi * bandwidth.value),
+        response_spread=RESPONSE_SPREAD if bandwidth.u is None else bandwidth.u / bandwidth.value,
     )

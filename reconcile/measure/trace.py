@@ -35,6 +35,8 @@ from reconcile.measure.trace_pulse import (
 
 Indices = NDArray[np.intp]
 
+RESPONSE_SPREAD = 0.15  # [1] of a response time stated without ± (common practice)
+
 _ABOVE = 5.0  # standard deviations of the filtered noise: among some hundred samples chance gives none in 10 000 traces
 _ABOVE_LATER = 6.0  # the same over a whole record
 _BESIDE = 0.03  # share of the largest below which nothing is a pulse: what the slow background leaves beside a long one
@@ -52,9 +54,10 @@ class ProbeSetup:
     standoff: float  # [m] site to probe
     sound_speed: float  # [m/s]
     trigger_offset: float  # [s] what happens at t after the laser pulse is recorded at t + this
-    response_time: float  # [s] of the probe's one pole
+    response_time: float  # [s] of the probe's one pole, as stated
     full_scale: float | None = None  # [V] at which the recorder clips; None: not known
     lifetime_hint: float | None = None  # [s] where the collapse is expected, within a factor of two; None: not known
+    response_spread: float = RESPONSE_SPREAD  # [1] standard uncertainty of the response time's logarithm; 0: exact
 
     @property
     def travel(self) -> float:
@@ -106,8 +109,9 @@ def measure_trace(time: Array, voltage: Array, setup: ProbeSetup) -> Finding:
     -------
     `arrival-time` [s] after the laser pulse, of the front; `pressure-integral` [Pa² s] of the first compression;
     `peak-pressure` [Pa]; `bubble-lifetime` [s], where a collapse is in the record. Integral and peak are left out
-    where the pulse is clipped. Uncertainties hold the trace's own part alone: noise, baseline, sampling; not
-    sensitivity, standoff, trigger and response time, which all traces share. Collapse and echo are told apart by
+    where the pulse is clipped. Uncertainties hold the trace's own part alone: noise, baseline, sampling, and what
+    the response time's own uncertainty makes of a front; not sensitivity, standoff and trigger, which all traces
+    share. Collapse and echo are told apart by
     time, sign, shape and what spreading allows, never by the collapse's being louder.
 
     Raises
@@ -197,7 +201,7 @@ def _measured_first(record: _Record, noticed: int, loud: tuple[int, int] | None)
     noise = noise_of(signal[quiet], record.noise.step)
     lobe = find_lobe(signal, noticed, reach, width, 0.5 * noise.sd / math.sqrt(width))
     smear = smear_of_path(setup.standoff)
-    pulse = Pulse(time, signal, record.clipped, lobe, noise, setup.response_time, smear)
+    pulse = Pulse(time, signal, record.clipped, lobe, noise, setup.response_time, setup.response_spread, smear)
     front = fit_front(pulse)
     if front is None:
         raise Unmeasurable(
@@ -317,7 +321,9 @@ def _collapse_front(record: _Record, event: Event) -> Front | None:
         signal, event.first, event.last - event.first + 12 * width + 4, width, 0.5 * noise.sd / math.sqrt(width)
     )
     smear = smear_of_path(setup.standoff)
-    front = fit_front(Pulse(record.time, signal, record.clipped, lobe, noise, setup.response_time, smear))
+    front = fit_front(
+        Pulse(record.time, signal, record.clipped, lobe, noise, setup.response_time, setup.response_spread, smear)
+    )
     return None if front is None else replace(front, u=math.hypot(front.u, _slope_u(front, baseline)))
 
 

@@ -16,7 +16,8 @@ from reconcile.measure.trace_noise import Noise
 
 ABSORPTION = 25e-15  # [s²/m] of sound in water over the frequency squared (Pinkerton 1949, from memory)
 # The front's true shape departs from a jump that decays: share of the response time that stays unknown.
-_SHAPE = 0.02
+_SHAPE = 0.005
+_STARTS = (1.2, 4.0, 12.0)  # decay over response time
 Flags = NDArray[np.bool_]
 _ROOT_2 = math.sqrt(2.0)
 
@@ -62,7 +63,8 @@ class Pulse:
     clipped: Flags  # (n,)
     lobe: Lobe
     noise: Noise
-    response: float  # [s] of the probe
+    response: float  # [s] of the probe, as stated
+    spread: float  # [1] standard uncertainty of the stated response time's logarithm; 0: exact
     smear: float  # [s] typical one; the fit may depart from it by a factor
 
 
@@ -151,6 +153,8 @@ def find_lobe(signal: Array, start: int, reach: int, width: int, low: float) -> 
 def fit_front(pulse: Pulse, whole: bool = False) -> Front | None:
     """Fit the rise of a pulse, or the whole of its first compression; clipped samples count as "at least this".
 
+    The response time is fitted too, held by what is stated of it: taken as exact, a wrong one would move the front.
+
     Returns
     -------
     None where the fit finds no front.
@@ -168,7 +172,8 @@ def fit_front(pulse: Pulse, whole: bool = False) -> Front | None:
     sd = noise.sd * math.sqrt(noise.excess)
     largest = max(float(signal[lobe.peak]), noise.sd)
     data = (t, y, sd, top)
-    fits = [fit for form in FORMS if (fit := _fitted(data, form, (largest, response, pulse.smear))) is not None]
+    scales = (largest, response, pulse.smear, pulse.spread)
+    fits = [fit for form in FORMS if (fit := _fitted(data, form, scales)) is not None]
     if not fits:
         return None
     # Both forms of decay count by how well they fit: their difference belongs to the uncertainty.
@@ -187,37 +192,52 @@ def fit_front(pulse: Pulse, whole: bool = False) -> Front | None:
 def _fitted(
     data: tuple[Array, Array, float, Flags],
     form: Callable[[Array, float, float, float], Array],
-    scales: tuple[float, float, float],
+    scales: tuple[float, float, float, float],
 ) -> tuple[Front, float] | None:
-    """Fit one form to (times, signal, sd of a sample, which samples were clipped); scales: height, response, smear.
+    """Fit one form to (times, signal, sd of a sample, which samples were clipped); scales: height, response,
+    smear, spread of the response's logarithm.
 
     Returns
     -------
     The front, its time counted as `times` are, and half its sum of squares.
     """
     t, y, sd, top = data
-    largest, response, smear = scales
+    largest, response, smear, spread = scales
 
-    def parts(x: Array) -> tuple[float, float, float, float]:
-        height, at, decay, blur = x.tolist()
+    def parts(x: Array) -> tuple[float, float, float, float, float]:
+        height, at, decay, blur, pole = x.tolist()
         decay = response * math.exp(min(max(decay, -6.0), 12.0))
-        return largest * math.exp(min(height, 20.0)), at * response, decay, smear * math.exp(min(max(blur, -6.0), 4.0))
+        blur = smear * math.exp(min(max(blur, -6.0), 4.0))
+        pole = response * math.exp(spread * min(max(pole, -20.0), 20.0))
+        return largest * math.exp(min(height, 20.0)), at * response, decay, blur, pole
 
     def residuals(x: Array) -> Array:
-        height, at, decay, blur = parts(x)
-        off = (height * form(t - at, decay, response, blur) - y) / sd
+        height, at, decay, blur, pole = parts(x)
+        off = (height * form(t - at, decay, pole, blur) - y) / sd
         off[top] = np.minimum(off[top], 0.0)
-        return np.concatenate((off, [(x[2] - math.log(4.0)) / 1.5, x[3], 0.2 * (x[0] - 0.7)]))
+        return np.concatenate((off, [(x[2] - math.log(4.0)) / 1.5, x[3], x[4], 0.2 * (x[0] - 0.7)]))
 
-    start = np.array([0.7, -0.3, math.log(4.0), 0.0])
-    x, covariance, info, *_ = leastsq(residuals, start, full_output=True, maxfev=400)
-    rest = np.asarray(info["fvec"], dtype=np.float64)
-    if covariance is None or not np.isfinite(x).all() or not np.isfinite(rest).all():
+    # The sum of squares has more than one minimum: short pulses and long ones are each a start.
+    best: tuple[float, Array, Array, Array] | None = None
+    for times in _STARTS:
+        start = np.array([0.7, -0.3, math.log(times), 0.0, 0.0])
+        x, covariance, info, *_ = leastsq(residuals, start, full_output=True, maxfev=400)
+        rest = np.asarray(info["fvec"], dtype=np.float64)
+        if covariance is None or not np.isfinite(x).all() or not np.isfinite(rest).all():
+            continue
+        cost = 0.5 * float(rest @ rest)
+        if best is None or cost < best[0]:
+            best = cost, x, np.asarray(covariance, dtype=np.float64), rest
+    if best is None:
         return None
-    height, at, decay, blur = parts(x)
-    worse = max(1.0, float(np.sum(rest[: t.size] ** 2)) / max(t.size - 4, 1))
+    cost, x, covariance, rest = best
+    height, at, decay, blur, pole = parts(x)
+    free = max(t.size - 4, 1)
+    worse = float(np.sum(rest[: t.size] ** 2)) / free
+    if worse < 1.0 + 2.0 * math.sqrt(2.0 / free):  # chance alone scatters so far: the noise is as it was measured
+        worse = 1.0
     u = response * math.sqrt(max(float(covariance[1, 1]), 0.0) * worse)
-    return Front(at, u, height, decay, blur, response, form), 0.5 * float(rest @ rest)
+    return Front(at, u, height, decay, blur, pole, form), cost
 
 
 def integrate(pulse: Pulse, front: Front, baseline_u: float) -> tuple[float, float, tuple[int, int]]:
