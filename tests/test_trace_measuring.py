@@ -116,6 +116,38 @@ def test_one_difficulty_at_a_time(change):
     assert kinds["pressure-integral"].u < 0.2 * truth.integral
 
 
+@pytest.mark.parametrize("interval", [2e-9, 4e-9, 10e-9])
+@pytest.mark.parametrize("decay", [15e-9, 30e-9, 60e-9, 120e-9, 250e-9])
+def test_a_strong_long_pulse_does_not_hide_its_own_front(decay, interval):
+    """With and without a collapse, over quiet ground and hum; 4 u of arrival and integral."""
+    for times, quiet in [(10, True), (30, True), (100, True), (250, True), (30, False), (250, False)]:
+        bench = Bench(
+            interval=interval,
+            end=31e-6,
+            pressure=times * 2e-3 / 0.45e-6,
+            duration=decay,
+            form="exponential",
+            smear=0.0 if quiet else 2.5e-9,
+            advance=0.0,
+            lifetime=19e-6,
+            collapse=0.0 if quiet else 0.8,
+            echo=0.0 if quiet else -0.3,
+            noise=2e-3,
+            range=1.2,
+            hum=0.0 if quiet else 3e-3,
+            drift=0.0 if quiet else 2e-3,
+            pick_up=0.0 if quiet else 0.15,
+        )
+        kinds, truth, _ = measured(bench, seed=1)
+        arrival = kinds["arrival-time"]
+        assert abs(arrival.value - truth.arrival) < 4 * arrival.u, times
+        assert arrival.u < 0.5 * interval + 1e-9 * 10 / times, times
+        if decay >= 30e-9 or times > 10:  # else two samples of little more than the noise
+            integral = kinds["pressure-integral"]
+            assert abs(integral.value - truth.integral) < 4 * integral.u, times
+            assert integral.u < 0.25 * truth.integral, times
+
+
 def test_an_amplifier_that_recovers_slowly_from_the_pick_up():
     bench = Bench()
     time, voltage, truth = record(bench, np.random.default_rng(2))

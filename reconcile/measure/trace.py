@@ -20,6 +20,7 @@ from reconcile.measure.trace_noise import (
     pick_up,
     recorder_step,
     spread,
+    struck,
 )
 from reconcile.measure.trace_pulse import (
     Flags,
@@ -148,7 +149,7 @@ def _prepared(time: Array, voltage: Array, setup: ProbeSetup) -> _Record:
         )
     upright = voltage if setup.sensitivity > 0 else -voltage
     block = math.ceil(max(0.4e-6, 12 * setup.response_time, 32 * step) / step)
-    smooth = background(upright, block)
+    smooth = background(upright, block, struck(upright, setup.response_time / step))
     signal = upright - smooth
     sd = spread(signal)
     quantum = recorder_step(upright)

@@ -12,6 +12,8 @@ from reconcile.measure.measured import Array
 
 _BLOCKS = 150  # mean values to which a quiet stretch is reduced before a smooth baseline is fitted to it
 _LAGS = 24  # samples over which noise may hang together
+_STEEP = 7.0  # standard deviations of a jump between neighbouring means that only a front makes
+_LONGEST = 0.1  # share of a record beyond which what has not fallen to its half is a step, no pulse
 _TO_SD = 1.4826  # from the median absolute deviation to the standard deviation of a normal distribution
 
 
@@ -71,20 +73,65 @@ def recorder_step(voltage: Array) -> float:
     return float(np.median(steps[steps <= 1.5 * steps[steps > 1e-9 * float(np.ptp(levels))].min()]))
 
 
-def background(voltage: Array, block: int) -> Array:
-    """Return what changes slowly (n,) [V]: medians of blocks, joined by straight lines; pulses shorter than half a block drop out."""
+def struck(voltage: Array, response: float) -> NDArray[np.bool_]:
+    """Return which samples (n,) lie in a pulse, told by its front: a slow background has none, however strong.
+
+    From the front a pulse is taken to last until, falling on as fast as it fell to its half, it is below the noise.
+
+    Parameters
+    ----------
+    voltage : (n,) [V]
+    response : samples of the probe's response time
+    """
+    width = max(2, math.ceil(1.5 * response))
+    gap = math.ceil(2.0 * response)
     n = voltage.size
-    count = max(1, n // block)
-    edges = np.linspace(0, n, count + 1).astype(int)
-    if count == 1:
+    flags = np.zeros(n, dtype=bool)
+    mean = np.convolve(voltage, np.ones(width) / width, mode="valid")  # from the sample on
+    if mean.size <= 4 * (width + gap):
+        return flags
+    jump = mean[width + gap :] - mean[: -width - gap]
+    noise = spread(jump)
+    steep = np.flatnonzero(np.abs(jump - np.median(jump)) > max(_STEEP * noise, 2.0 * recorder_step(voltage)))
+    longest, until = round(_LONGEST * n), 0
+    for start in steep.tolist():
+        front = start + width + gap
+        if front < until:  # the fall of a pulse is no front
+            continue
+        sign = math.copysign(1.0, float(jump[start]))
+        above = sign * (mean[front : front + longest] - mean[start])
+        peak = int(np.argmax(above[: 4 * (width + gap)]))
+        height = float(above[peak])
+        fallen = np.flatnonzero(above[peak:] < 0.5 * height)
+        if fallen.size == 0:  # a step, which never falls
+            until = front + width + gap
+            continue
+        halves = math.log2(max(height / max(noise, 1e-30), 2.0)) + 1.0
+        until = front + peak + width + math.ceil(halves * int(fallen[0]))
+        flags[max(front - width - gap, 0) : until] = True
+    return flags
+
+
+def background(voltage: Array, block: int, without: NDArray[np.bool_]) -> Array:
+    """Return what changes slowly (n,) [V]: medians of blocks, joined by straight lines, also across what is left out.
+
+    Parameters
+    ----------
+    voltage : (n,) [V]
+    block : samples of a block
+    without : (n,) samples left out; of the rest, pulses shorter than half a block drop out
+    """
+    n = voltage.size
+    edges = np.linspace(0, n, max(1, n // block) + 1).astype(int)
+    middles, medians = [], []
+    for begin, end in zip(edges[:-1], edges[1:], strict=True):
+        kept = begin + np.flatnonzero(~without[begin:end])
+        if kept.size >= (end - begin) / 3:
+            middles.append(float(kept.mean()))
+            medians.append(float(np.median(voltage[kept])))
+    if not medians:
         return np.full(n, float(np.median(voltage)))
-    size = n // count
-    medians = (
-        np.median(voltage[: size * count].reshape(count, size), axis=1)
-        if n == size * count
-        else np.array([np.median(voltage[a:b]) for a, b in zip(edges[:-1], edges[1:], strict=True)])
-    )
-    return np.interp(np.arange(n), 0.5 * (edges[:-1] + edges[1:] - 1), medians)
+    return np.interp(np.arange(n), middles, medians)
 
 
 def spread(values: Array) -> float:

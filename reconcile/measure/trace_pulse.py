@@ -253,13 +253,20 @@ def integrate(pulse: Pulse, front: Front, baseline_u: float) -> tuple[float, flo
     n = y.size
     total = (float(y @ y) - n * (noise.sd**2 + baseline_u**2)) * step
     own = 4.0 * noise.of_sum(y) + 2.0 * n * float(noise.covariance[0] ** 2 + 2.0 * np.sum(noise.covariance[1:] ** 2))
-    fine = (np.arange(n * 16) + 0.5) / 16 - 0.5
-    exact = float(np.sum(front.at(time[begin] + fine * step) ** 2)) * step / 16
-    between = exact - float(np.sum(front.at(time[begin : end + 1]) ** 2)) * step
+    between = _between(time[begin : end + 1], front)
+    moved = _between(time[begin : end + 1], replace(front, time=front.time + front.u)) - between
     tail = float(y[-1]) ** 2 * min(front.decay, n * step) / 2
     by_baseline = 2.0 * float(y.sum()) * step * baseline_u
-    u = math.sqrt(own * step**2 + by_baseline**2 + (0.5 * between) ** 2 + tail**2)
+    u = math.sqrt(own * step**2 + by_baseline**2 + (0.5 * between) ** 2 + moved**2 + tail**2)
     return float(total + between), u, (begin, end)
+
+
+def _between(time: Array, front: Front) -> float:
+    """Return by how much ∫V²dt [V² s] of the fitted pulse exceeds the sum over samples at (n,) [s]."""
+    step = float(time[-1] - time[0]) / max(time.size - 1, 1)
+    fine = (np.arange(time.size * 16) + 0.5) / 16 - 0.5
+    exact = float(np.sum(front.at(time[0] + fine * step) ** 2)) * step / 16
+    return exact - float(np.sum(front.at(time) ** 2)) * step
 
 
 def clipped_samples(voltage: Array, step: float, noise: float, full_scale: float | None) -> Flags:
