@@ -194,8 +194,9 @@ def _fitted(
     form: Callable[[Array, float, float, float], Array],
     scales: tuple[float, float, float, float],
 ) -> tuple[Front, float] | None:
-    """Fit one form to (times, signal, sd of a sample, which samples were clipped); scales: height, response,
-    smear, spread of the response's logarithm.
+    """Fit one form to (times, signal, sd of a sample, which samples were clipped).
+
+    Scales: height, response, smear, spread of the response's logarithm.
 
     Returns
     -------
