@@ -76,7 +76,8 @@ SHOTS = (
 )
 
 
-TABLE_KIND = {"camera": "shadowgraph", "traces": "probe-trace"}  # of tables whose readings are not of the table's own kind
+# Of tables whose readings are not of the table's own kind.
+TABLE_KIND = {"camera": "shadowgraph", "traces": "probe-trace"}
 
 
 def reading(kind: str, shot: str, table: str, value: float, u: float, delay: float | None = None) -> Reading:
