@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import logging
 import math
 import warnings
 from collections.abc import Iterable, Sequence
@@ -172,6 +173,7 @@ def _corner(close_out: CloseOut, informed: Sequence[InputResult], folder: Path) 
     with warnings.catch_warnings():
         # Few draws leave contour levels that coincide: the plot is then coarse, which is no fault to report.
         warnings.simplefilter("ignore")
+        logging.disable(logging.WARNING)  # corner says so on the root logger as well
         corner.corner(
             draws,
             fig=figure,
@@ -185,6 +187,7 @@ def _corner(close_out: CloseOut, informed: Sequence[InputResult], folder: Path) 
             fill_contours=True,
             labelpad=0.12,
         )
+        logging.disable(logging.NOTSET)
     for axes in figure.axes:
         axes.tick_params(labelsize=6)
     raster, _ = save(figure, folder, "corner", vector=False)
