@@ -346,7 +346,8 @@ def _lifetime(
         remarks.append("the pulse taken for the collapse could be an echo of the first pulse")
     if front is None:
         remarks.append("the collapse's pulse does not rise as a front: its time is that of its peak")
-        at, u = float(record.time[collapse.peak]), max(record.step, setup.response_time)
+        at = float(record.time[collapse.peak])
+        u = max(record.step, setup.response_time, at - float(record.time[collapse.first]))
     else:
         at, u = front.time, front.u
     return [Measured("bubble-lifetime", at - setup.trigger_offset - setup.travel, u)], remarks
