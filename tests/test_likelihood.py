@@ -146,7 +146,7 @@ def in_peaks(readings: list[Reading], parts, rate: float) -> np.ndarray:
         (reading,), ((expected, shared, width),) = readings, parts
         limit, u = (math.log(reading.limit), 1 / 3) if logarithmic else (reading.limit, reading.limit / 3)
         sound_below = stats.norm.cdf(limit, expected, np.sqrt(u**2 + shared**2))
-        return (1 - rate) * sound_below + rate * stats.cauchy.cdf(limit, expected, width)
+        return (1 - rate) * sound_below + rate * stats.cauchy.cdf(limit, expected, np.hypot(width, u))
     value = [math.log(entry.value) if logarithmic else entry.value for entry in readings]
     u = [entry.u / entry.value if logarithmic else entry.u for entry in readings]
     off = np.stack([y - expected for y, (expected, _, _) in zip(value, parts, strict=True)])
@@ -157,7 +157,13 @@ def in_peaks(readings: list[Reading], parts, rate: float) -> np.ndarray:
             if is_sound:
                 term = term * (1 - rate)
             else:
-                term = term * rate * stats.cauchy.pdf(off[n], 0.0, parts[n][2]) * u[n] * math.sqrt(2 * math.pi)
+                term = (
+                    term
+                    * rate
+                    * stats.cauchy.pdf(off[n], 0.0, np.hypot(parts[n][2], u[n]))
+                    * u[n]
+                    * math.sqrt(2 * math.pi)
+                )
         kept = [n for n, is_sound in enumerate(pattern) if is_sound]
         if kept:
             shared = np.stack([parts[n][1] for n in kept], axis=-1) / np.array([u[n] for n in kept])

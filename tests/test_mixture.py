@@ -39,7 +39,8 @@ def by_quadrature(value, u, expected, shared, width, rate, stray: int | None = N
         for n in range(r):
             z = (value[n] - expected[n] - shared[n] * offset) / u[n]
             sound = (1.0 - rate) * math.exp(-0.5 * z * z) / (u[n] * math.sqrt(2.0 * math.pi))
-            wrong = rate / (math.pi * width * (1.0 + ((value[n] - expected[n]) / width) ** 2))
+            wide = math.hypot(width, u[n])
+            wrong = rate / (math.pi * wide * (1.0 + ((value[n] - expected[n]) / wide) ** 2))
             product *= wrong if stray == n else sound + wrong
         return product
 
@@ -137,7 +138,9 @@ def test_below_a_limit_counts_the_probability_of_lying_there(limit, rate):
         return stats.norm.pdf(offset) * stats.norm.cdf(limit, expected + shared * offset, u)
 
     below_sound = integrate.quad(sound, -9, 9, epsabs=1e-13, limit=200)[0]
-    below_stray = integrate.quad(lambda y: stats.cauchy.pdf(y, expected, width), -np.inf, limit, epsabs=1e-13)[0]
+    below_stray = integrate.quad(
+        lambda y: stats.cauchy.pdf(y, expected, math.hypot(width, u)), -np.inf, limit, epsabs=1e-13
+    )[0]
     whole = (1 - rate) * below_sound + rate * below_stray
     found = density(here, np.array([rate]), censored=True)
     assert found.shape == (1, 1)
@@ -150,7 +153,9 @@ def test_below_a_limit_counts_the_probability_of_lying_there(limit, rate):
 def test_a_censored_cell_far_above_its_limit_is_not_impossible():
     # A crater where none was seen: only a stray reading can explain it. By hand, the Cauchy tail: width/(π distance).
     found = density(cell([1.0], 0.1, 1000.0, 0.1, 1.0), np.array([0.05]), censored=True)
-    assert found[0, 0] == pytest.approx(0.05 / (np.pi * 999.0), rel=1e-5)  # next term of the tail: 1/(3 · 999²)
+    assert found[0, 0] == pytest.approx(
+        0.05 * np.hypot(1.0, 0.1) / (np.pi * 999.0), rel=1e-5
+    )  # next term of the tail: 1/(3 · 999²)
 
 
 # From five repeats on, only no, one or all strays are weighed: 2^r patterns would be too many.
@@ -194,3 +199,9 @@ def test_two_strays_among_six_do_not_take_the_others_with_them():
     assert stray == pytest.approx(exact, abs=0.05)  # four good ones of some 0.002 each
     # A third stray beside the two may be left out: four of some 0.002.
     assert density(here, rate, censored=False)[0, 0] == pytest.approx(in_peaks(brute, 0.03, 6), rel=0.02)
+
+
+def test_a_reading_too_uncertain_to_contradict_anything_is_not_called_stray():
+    # A hundred times more uncertain than a stray one is wide: it agrees with whatever is expected.
+    here = cell([0.3], 100.0, 0.0, 0.05, 1.0)
+    assert stray_probability(here, np.array([0.05]), censored=False)[0, 0, 0] < 0.05

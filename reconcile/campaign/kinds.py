@@ -31,7 +31,7 @@ KINDS: dict[str, Kind] = {
         Kind("pressure-integral", "pressure integral", "Pa2 s", "shot", logarithmic=True, sound=True, scatter="lognormal(5 %, 70 %)"),
         Kind("arrival-time", "arrival time", "s", "shot", sound=True, scatter="lognormal(10 ns, 70 %)"),
         Kind("median-diameter", "median particle diameter", "m", "sample", logarithmic=True, scatter="lognormal(5 %, 70 %)"),
-        Kind("reflected-fraction", "reflected fraction", "1", "shot", scatter="lognormal(5 %, 70 %)"),
+        Kind("reflected-fraction", "reflected fraction", "1", "shot", scatter="lognormal(1 %, 70 %)"),
         Kind("crater-volume", "crater volume", "m3", "shot", fitted=False),
         Kind("peak-pressure", "peak pressure", "Pa", "shot", fitted=False, sound=True),
         Kind("shock-radius", "shock front radius", "m", "shot", has_delay=True, fitted=False),

@@ -12,14 +12,25 @@ from reconcile.inference.agreement import agreement
 from reconcile.inference.fit import Fitted
 from reconcile.inference.lattice import REACH
 from reconcile.inference.model import RELATIVE_SCATTER, Expected, Exposures, expected_of
-from reconcile.inference.outcome import Band, CloseOut, InputResult, KindResult, Sampling, Share, Strained
-from reconcile.inference.posterior import budgets, correlations, input_results, stored, strained_inputs
+from reconcile.inference.outcome import (
+    Band,
+    CloseOut,
+    InputResult,
+    KindResult,
+    ReadingResult,
+    Sampling,
+    Share,
+    Strained,
+)
+from reconcile.inference.posterior import budgets, correlations, input_results, stored, strained_inputs, told
 from reconcile.inference.problem import chosen_draws
 from reconcile.inference.validity import warnings_of
-from reconcile.inference.verdicts import judge
+from reconcile.inference.verdicts import Judged, judge
 
 GOOD_INTEGRAL = 0.1  # [nat] error of the integration over shots above which the draws are not to be signed
-_LITTLE = 0.1  # `informed` below which an input counts as untold
+_MOSTLY, _LEAST = 0.5, 4  # share of a kind's readings, of at least so many, that may be stray in a close-out to sign
+_MOST_FLAGGED = 1.0 / 3.0  # share of shots with readings that may be flagged
+_EDGE = 0.2  # distance of a shot's deviation from the end of what was considered, in the logarithm
 _BAND_POINTS, _BAND_DRAWS = 40, 400
 
 
@@ -32,7 +43,7 @@ def conclude(fitted: Fitted, gathered: Gathered, *, seed: int, target: int, work
     inputs = input_results(fitted, np.random.default_rng(for_priors))
     strained, budget = strained_inputs(fitted), budgets(fitted)
     sampling = _sampling(fitted, target)
-    reasons = _status_reasons(sampling, kinds, strained, fitted)
+    reasons = (*_status_reasons(sampling, kinds, strained, fitted), *_reasons_of_flags(judged))
     names, natural, scaled = correlations(fitted)
     return CloseOut(
         gathered=gathered,
@@ -94,6 +105,41 @@ def _status_reasons(
     return tuple(reasons)
 
 
+def _reasons_of_flags(judged: Judged) -> tuple[str, ...]:
+    """Why verdicts alone forbid signing: what was flagged is too much to be chance, or cannot be judged."""
+    reasons = []
+    fitted = [result for result in judged.readings if result.p_stray is not None]
+    for kind in dict.fromkeys(result.reading.kind for result in fitted):
+        own = [result for result in fitted if result.reading.kind == kind]
+        stray = sum(result.verdict == "stray" for result in own)
+        if len(own) >= _LEAST and stray > _MOSTLY * len(own):
+            reasons.append(
+                f"{stray} of {len(own)} {KINDS[kind].words} readings are stray: not single readings but the whole kind, "
+                "or a number in the manifest, contradicts the rest."
+            )
+    by_shot: dict[str, list[ReadingResult]] = {}
+    for result in fitted:
+        if result.reading.shot is not None:
+            by_shot.setdefault(result.reading.shot, []).append(result)
+    flagged = [shot for shot in judged.shots if shot.verdict in ("misread", "stray")]
+    if len(by_shot) >= _LEAST and len(flagged) > _MOST_FLAGGED * len(by_shot):
+        reasons.append(
+            f"{len(flagged)} of {len(by_shot)} shots with readings are flagged: look for a wrong unit or instrument number "
+            "in the manifest before believing any of it."
+        )
+    for shot in judged.shots:
+        own = by_shot.get(shot.shot.name, [])
+        all_stray = len(own) > 1 and all(result.verdict == "stray" for result in own)
+        at_edge = shot.verdict == "misread" and abs(np.log(shot.energy_ratio)) > REACH - _EDGE
+        if all_stray or at_edge:
+            reasons.append(
+                f"Nothing that was read of shot {shot.shot.name} fits its logged energy within a factor of "
+                f"{np.exp(REACH):.0f}, the most that is considered: look for a slip of unit or decimal in its log; correct it, "
+                "or set the shot aside. Its fluence here is not to be used."
+            )
+    return tuple(reasons)
+
+
 def _could_not_tell(
     fitted: Fitted, inputs: tuple[InputResult, ...], budget: dict[str, tuple[Share, ...]]
 ) -> tuple[str, ...]:
@@ -103,8 +149,8 @@ def _could_not_tell(
         for result in inputs
         if result.entry.belongs_to == "m"
         and not result.entry.derived
-        and (result.informed or 0.0) < _LITTLE
         and not result.fixed
+        and not told(fitted, result.entry.name)
     ]
     sentences = []
     if untold:

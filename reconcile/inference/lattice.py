@@ -143,6 +143,8 @@ def kept_points(lattice: Lattice, weights: Array, floor: float, neighbours: int)
         position = int(np.searchsorted(lattice.shots, shot))
         own = weights[lattice.pairs_of(position)]
         above = (own > floor * own.max(axis=0)).any(axis=1)
+        if not above.any():  # nowhere to be seen: every point is as good
+            above[:] = True
         widened = np.convolve(above, np.ones(2 * neighbours + 1), mode="same") > 0
         kept[shot] = points[widened]
     return kept

@@ -55,10 +55,11 @@ def _single(cell: Cell, rate: Array) -> Array:
     """
     u = cell.u[0]
     deviation = cell.value[0] - cell.expected[0]
-    stray = deviation / cell.width
+    width = np.hypot(cell.width, u)
+    stray = deviation / width
     stray *= stray
     stray += 1.0
-    stray *= cell.width
+    stray *= width
     np.divide(rate * (_ROOT_2_OVER_PI * u), stray, out=stray)
     inflation = cell.shared[0] / u
     inflation = inflation * inflation
@@ -118,7 +119,8 @@ def _patterns(cell: Cell, rate: Array) -> Iterator[tuple[tuple[int, ...], Array]
 
 
 def _stray(deviation: Array, u: Array, width: Array) -> Array:
-    """Cauchy density in units of a normal density's peak, 1/(u √2π)."""
+    """Cauchy density in units of a normal density's peak, 1/(u √2π); never narrower than the reading is uncertain."""
+    width = np.hypot(width, u)
     return _ROOT_2_OVER_PI * u / (width * (1.0 + (deviation / width) ** 2))
 
 
@@ -126,4 +128,4 @@ def _below(cell: Cell) -> tuple[Array, Array]:
     """Probabilities (r, m, draws) of lying below the limit, for a sound and for a stray reading."""
     deviation = cell.value - cell.expected
     spread = np.hypot(cell.u, cell.shared)
-    return special.ndtr(deviation / spread), 0.5 + np.arctan(deviation / cell.width) / np.pi
+    return special.ndtr(deviation / spread), 0.5 + np.arctan(deviation / np.hypot(cell.width, cell.u)) / np.pi

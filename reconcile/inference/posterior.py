@@ -16,7 +16,9 @@ from reconcile.inference.priors import Believed
 from reconcile.physics import beam, removal
 
 _PRIOR_DRAWS = 20_000
+_LITTLE, _SHIFTED = 0.1, 0.3  # drop of the variance, and shift in the prior's sd, below which an input was not told
 STRAINED_TAIL = 0.003  # two-sided: what a prior holds beyond the posterior mean
+_SPREADS = ("scatter.", "energy_jitter", "stray_rate", "misread_rate")  # smaller than believed is no fault
 _LEANING = ("absorbed_fraction", "coupling")
 
 
@@ -141,6 +143,16 @@ def _budget(target: Array, fitted: Fitted) -> tuple[Share, ...]:
     return tuple(sorted([Share(n, float(s)) for n, s in shares.items()] + rest, key=lambda share: -share.share))
 
 
+def told(fitted: Fitted, name: str) -> bool:
+    """Whether the readings say something of an input: its spread or its place, on its scale, has changed."""
+    known = fitted.problem.data.believed[name]
+    if known.density.fixed or name not in fitted.problem.names:
+        return False
+    spread, own = _prior_spread(known), _on_scale(known.entry, fitted.inputs[name])
+    middle = float(_on_scale(known.entry, known.density.quantile(np.array([0.5])))[0])
+    return bool(1.0 - (own.std() / spread) ** 2 > _LITTLE or abs(np.median(own) - middle) > _SHIFTED * spread)
+
+
 def _prior_spread(known: Believed) -> float:
     """Standard deviation of a prior on its input's scale, by quadrature over normal scores."""
     score = np.linspace(-6.0, 6.0, 601)
@@ -159,7 +171,7 @@ def strained_inputs(fitted: Fitted) -> tuple[Strained, ...]:
         mean = fitted.inputs[name].mean()
         below = float(known.density.cdf(np.array(mean)))
         tail = 2.0 * min(below, 1.0 - below)
-        if tail < STRAINED_TAIL:
+        if tail < STRAINED_TAIL and not (below < 0.5 and name.startswith(_SPREADS)):
             side = "below" if below < 0.5 else "above"
             sentence = (
                 f"The readings pull {name} far {side} what was believed of it: only {100 * tail:.2g} % of its prior lies "

@@ -98,8 +98,10 @@ def _look(fitted: Fitted, rng: np.random.Generator) -> _Looked:
 
 def _from_log_alone(inputs: Inputs, shape: tuple[int, int], rng: np.random.Generator) -> Array:
     """Deviations of shots that no reading speaks of."""
-    wrong = rng.uniform(size=shape) < inputs["misread_rate"]
-    return rng.standard_normal(shape) * np.where(wrong, MISREAD_SPREAD, inputs["energy_jitter"])
+    # The same draws for all of them: what is known alike must come out alike.
+    wrong = rng.uniform(size=shape[1]) < inputs["misread_rate"]
+    deviation = rng.standard_normal(shape[1]) * np.where(wrong, MISREAD_SPREAD, inputs["energy_jitter"])
+    return np.tile(deviation, (shape[0], 1))
 
 
 def _drawn(points: Array, weights: Array, step: float, rng: np.random.Generator) -> Array:

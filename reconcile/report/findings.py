@@ -86,6 +86,8 @@ def _input_row(result: InputResult) -> tuple[str, ...]:
 def _prior_row(result: InputResult) -> tuple[str, ...]:
     assert result.prior is not None
     place = "the package's default" if result.prior.place is None else str(result.prior.place)
+    if result.prior.place is None and "(" not in result.prior.text.partition(" (k")[0]:
+        place = "the manifest's instrument"  # a quantity with its ±, not a family of distributions
     return (result.entry.name, result.prior.text, place, BELONGS[result.entry.belongs_to])
 
 
