@@ -194,3 +194,17 @@ def test_a_property_of_an_unknown_material_can_stand_in_the_manifest(tmp_path):
         )
     )
     assert campaign.target.properties["density"].value == 9000.0
+
+
+@pytest.mark.parametrize(
+    ("old", "new", "key"),
+    [
+        ('spot_radius = "21 um ± 1 um"', 'spot_radius = "21 nm ± 1 nm"', "beam.spot_radius"),
+        ('spot_radius = "21 um ± 1 um"', 'spot_radius = "21 m ± 1 m"', "beam.spot_radius"),
+        ('wavelength = "1030 nm"', 'wavelength = "1030 um"', "beam.wavelength"),
+        ('pulse_duration = "350 fs"', 'pulse_duration = "350 s"', "beam.pulse_duration"),
+    ],
+)
+def test_a_beam_that_no_laboratory_has_is_a_slip_of_a_unit(tmp_path, old, new, key):
+    with pytest.raises(Refusal, match=rf"{key}.*Correct the number or its unit"):
+        load(write(tmp_path / "c", (old, new)))

@@ -15,6 +15,7 @@ from reconcile.campaign.manifest_tables import log_table, readings_tables
 from reconcile.campaign.materials import PROPERTY_NAMES, optical_constants, properties_of_liquid, properties_of_target
 from reconcile.campaign.patterns import relative_path
 from reconcile.campaign.prior_text import parse_prior
+from reconcile.campaign.quantity import shown
 from reconcile.campaign.refusal import Refusal, nearest
 from reconcile.campaign.schema import ABOUT, QUANTITIES, TEXTS, TOP, Key, questions
 
@@ -159,8 +160,26 @@ def _liquid(section: Section) -> Liquid:
     )
 
 
+# What no laboratory has: numbers beyond these are slips of a unit. [m], [m], [s]
+_BELIEVABLE = {"wavelength": (1e-7, 2e-5), "spot_radius": (2e-7, 1e-2), "pulse_duration": (1e-15, 1e-6)}
+
+
 def _beam(section: Section) -> Beam:
     reader = _Reader(section)
+    beam = _read_beam(reader)
+    for name, (least, most) in _BELIEVABLE.items():
+        quantity: Quantity = getattr(beam, name)
+        if not least <= quantity.value <= most:
+            raise Refusal(
+                section.place(name),
+                found=f"'{quantity.text}'",
+                expected=f"something from {shown(least, None, quantity.unit)} to {shown(most, None, quantity.unit)}",
+                remedy="Correct the number or its unit.",
+            )
+    return beam
+
+
+def _read_beam(reader: _Reader) -> Beam:
     return Beam(
         wavelength=reader.needed("wavelength"),
         pulse_duration=reader.needed("pulse_duration"),

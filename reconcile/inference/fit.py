@@ -9,6 +9,7 @@ import numpy as np
 
 from reconcile.campaign.progress import Progress
 from reconcile.campaign.readings import Gathered
+from reconcile.campaign.refusal import Refusal
 from reconcile.inference.adapt import Begin
 from reconcile.inference.checkpoint import Checkpoint, Stored
 from reconcile.inference.coordinates import Inputs
@@ -105,9 +106,18 @@ def fit(
 
 def _begin(data: Data, rng: np.random.Generator) -> tuple[Start, tuple[int, ...]]:
     """Find the start, and once more where it shows radii that were read after the first collapse."""
-    start = find_start(data, rng)
-    late = _late_radii(start)
-    return (find_start(data.leave_out(late), rng), late) if late else (start, late)
+    try:
+        start = find_start(data, rng)
+        late = _late_radii(start)
+        return (find_start(data.leave_out(late), rng), late) if late else (start, late)
+    except np.linalg.LinAlgError:
+        # No curvature at what should be the mode: numbers so far apart that nothing fits anything.
+        raise Refusal(
+            "the readings and the manifest together",
+            found="numbers so far from each other that no input lies between them",
+            expected="readings that the model can show at the logged energies, within some powers of ten",
+            remedy="Look for a wrong unit in the manifest, the log or a column: `reconcile measure` lists what was read.",
+        ) from None
 
 
 def _taken_up(data: Data, stored: Stored) -> Start:
