@@ -208,10 +208,22 @@ _RULES: dict[str, _Rule] = {
 }
 
 
+# What no bench shows, by unit: numbers beyond these are slips of a unit or of a decimal.
+_MOST = {"m": 1.0, "s": 10.0, "Pa2 s": 1e18, "Pa": 1e15, "m3": 1.0, "1": 1e4}
+
+
+def _never(value: float, bound: float) -> bool:
+    """Allow nothing."""
+    del value, bound
+    return False
+
+
 def _check_value(kind: Kind, value: float, u: float, table: Table, cell: Cell) -> None:
     """Refuse a number that such a reading cannot be."""
     limit = table.detection_limit.value if table.detection_limit is not None else 0.0
     allowed, expected = _rule(kind)
+    if value > _MOST[kind.unit]:
+        allowed, expected = _never, "something that fits on a bench"
     if not allowed(value, max(limit, _NEGATIVE * u)) and not 0 <= value < limit:
         raise Refusal(
             cell.place,

@@ -129,11 +129,12 @@ def _reasons_of_flags(judged: Judged) -> tuple[str, ...]:
         )
     for shot in judged.shots:
         own = by_shot.get(shot.shot.name, [])
-        all_stray = len(own) > 1 and all(result.verdict == "stray" for result in own)
+        strays = sum(result.verdict == "stray" for result in own)
+        most_stray = strays > 1 and strays > _MOSTLY * len(own)
         at_edge = shot.verdict == "misread" and abs(np.log(shot.energy_ratio)) > REACH - _EDGE
-        if all_stray or at_edge:
+        if most_stray or at_edge:
             reasons.append(
-                f"Nothing that was read of shot {shot.shot.name} fits its logged energy within a factor of "
+                f"What was read of shot {shot.shot.name} does not fit its logged energy within a factor of "
                 f"{np.exp(REACH):.0f}, the most that is considered: look for a slip of unit or decimal in its log; correct it, "
                 "or set the shot aside. Its fluence here is not to be used."
             )

@@ -375,3 +375,10 @@ def test_other_spreadsheets_are_refused_with_the_way_out(tmp_path, name, content
         gathered(folder)
     assert str(caught.value).startswith(f"{name}: found ")
     assert says in str(caught.value)
+
+
+def test_a_depth_of_astronomical_size_is_refused_by_its_cell(tmp_path):
+    folder = write(tmp_path / "c", craters="Shot,Depth (um),u (um)\ns001,1e308,0.020\ns002,0.515,0.021\n")
+    (refused,) = gathered(folder).refused
+    assert refused.source == "craters.csv!line 2"
+    assert "1e308" in refused.reason
