@@ -228,10 +228,3 @@ class Coordinates:
     @staticmethod
     def _arrival(state: Expected, known: Inputs) -> Array:
         return state.pulse.arrival_time + known.get("trigger_offset", np.zeros(1))
-
-    def held_at(self, held: dict[str, float]) -> Coordinates:
-        """Return the same coordinates with other values for what is not sampled."""
-        twin = object.__new__(Coordinates)
-        twin.__dict__.update(self.__dict__)
-        twin._held = {name: np.array([value]) for name, value in held.items()}
-        return twin
